@@ -1,0 +1,287 @@
+"""What one value of a design file may be: the limits that annotate the fields of the schema.
+
+A limit is data beside the type, as in ``Annotated[fmpq, Number(above=0)]``.  It knows what it accepts in words, and
+raises :class:`Wrong` for what it does not accept; the reader adds the key path.
+"""
+
+from collections.abc import Iterable
+from decimal import Decimal
+from typing import ClassVar, TypeAlias
+from unicodedata import category
+
+from attrs import frozen
+from flint import fmpq
+
+from afterkick.design.names import IDENTIFIER_RULE, TARGET_RULE, identifier_fault, is_target_name
+from afterkick.numbers import fraction, rational
+
+__all__ = [
+    "HIGHEST_ORDER",
+    "Choice",
+    "Identifier",
+    "Items",
+    "Line",
+    "ListLimit",
+    "Number",
+    "Polynomial",
+    "TargetName",
+    "Unreadable",
+    "ValueLimit",
+    "Whole",
+    "Wrong",
+    "describe",
+    "exact_number",
+    "nearest",
+    "plain",
+]
+
+HIGHEST_ORDER = 16
+HIGHEST_EXPONENT = 300
+MOST_DIGITS = 400
+BITS_PER_DIGIT = 3.33
+LONGEST_LINE = 120
+LONGEST_SHOWN = 60
+
+UNPRINTABLE = frozenset({"Cc", "Cf", "Co", "Cs", "Zl", "Zp"})
+
+
+class Wrong(Exception):
+    """One value is not accepted; the reader turns it into a Problem by adding the key path."""
+
+    def __init__(self, found: str, accepted: str, remedy: str = "") -> None:
+        super().__init__(found, accepted, remedy)
+        self.found = found
+        self.accepted = accepted
+        self.remedy = remedy
+
+
+@frozen
+class Unreadable:
+    """A TOML number whose size no filter needs; kept apart so that nobody computes with it."""
+
+    text: str
+
+
+def visible(text: str) -> str:
+    """``text`` in double quotes, cut to a line, what a terminal can't show as escapes."""
+    cut = text if len(text) <= LONGEST_SHOWN else text[:LONGEST_SHOWN] + "..."
+    body = "".join(c if category(c) not in UNPRINTABLE else c.encode("unicode_escape").decode("ascii") for c in cut)
+    return f'"{body}"'
+
+
+def describe(value: object) -> str:
+    """A TOML value as a message shows it; never expands a huge number."""
+    match value:
+        case bool():
+            return str(value).lower()
+        case str():
+            return f"the text {visible(value)}"
+        case int():
+            return str(value) if value.bit_length() < 4 * LONGEST_SHOWN else "an integer of absurd size"
+        case Decimal():
+            return str(value) if len(value.as_tuple().digits) < LONGEST_SHOWN else f"{value:.6e} (in full)"
+        case Unreadable():
+            return f"the number {value.text[:LONGEST_SHOWN]}{'...' if len(value.text) > LONGEST_SHOWN else ''}"
+        case list():
+            return f"a list of {len(value)}" if value else "an empty list"
+        case dict():
+            return "a table"
+        case _:
+            return f"the date or time {value}"
+
+
+def plain(value: fmpq) -> str:
+    """A rational as a message shows it: up to 12 significant digits."""
+    return f"{float(fraction(value)):.12g}"
+
+
+def nearest(text: str, names: Iterable[str]) -> str | None:
+    """The name that was probably meant."""
+    from difflib import get_close_matches  # only a wrong file pays for it
+
+    close = get_close_matches(text[:LONGEST_LINE].lower(), list(names), n=1)
+    return close[0] if close else None
+
+
+def exact_number(raw: object) -> fmpq:
+    """The exact rational of a TOML integer or float.
+
+    :raises Wrong: for what is no number, is not finite, or has over 400 digits or an exponent beyond +-300.
+    """
+    match raw:
+        case bool():
+            pass
+        case int() if raw.bit_length() <= HIGHEST_EXPONENT * BITS_PER_DIGIT:
+            return rational(raw)
+        case Decimal() if not raw.is_finite():
+            raise Wrong(describe(raw), "a finite number")
+        # The exponent is looked at before any power of ten is formed.
+        case Decimal() if abs(raw.adjusted()) <= HIGHEST_EXPONENT and len(raw.as_tuple().digits) <= MOST_DIGITS:
+            return rational(raw)
+        case int() | Decimal() | Unreadable():
+            size = f"of magnitude 1e-{HIGHEST_EXPONENT} to 1e{HIGHEST_EXPONENT} with at most {MOST_DIGITS} digits"
+            raise Wrong(describe(raw), f"a number {size}")
+    raise Wrong(describe(raw), "a number", "write the number without quotes" if isinstance(raw, str) else "")
+
+
+@frozen
+class Number:
+    """A real number in a range."""
+
+    above: int | None = None
+    least: int | None = None
+    most: int | None = None
+    nonzero: bool = False
+    remedy: str = ""
+
+    @property
+    def accepted(self) -> str:
+        ends = [
+            text
+            for text, given in (
+                (f"above {self.above}", self.above is not None),
+                (f"of at least {self.least}", self.least is not None),
+                (f"of at most {self.most}", self.most is not None),
+                ("other than 0", self.nonzero),
+            )
+            if given
+        ]
+        return "a number " + " and ".join(ends)
+
+    def check(self, value: fmpq) -> None:
+        if (
+            (self.above is not None and value <= self.above)
+            or (self.least is not None and value < self.least)
+            or (self.most is not None and value > self.most)
+            or (self.nonzero and value == 0)
+        ):
+            raise Wrong(plain(value), self.accepted, self.remedy)
+
+
+@frozen
+class Whole:
+    """An integer in a range, both ends included."""
+
+    least: int
+    most: int
+
+    @property
+    def accepted(self) -> str:
+        return f"an integer from {self.least} to {self.most}"
+
+    def check(self, value: int) -> None:
+        if not self.least <= value <= self.most:
+            raise Wrong(describe(value), self.accepted)
+
+
+@frozen
+class Choice:
+    """One of a few names or integers."""
+
+    names: tuple[str, ...] | tuple[int, ...]
+
+    @property
+    def accepted(self) -> str:
+        shown = [f'"{name}"' if isinstance(name, str) else str(name) for name in self.names]
+        return " or ".join([", ".join(shown[:-1]), shown[-1]]) if len(shown) > 1 else shown[0]
+
+    def check(self, value: str | int) -> None:
+        if value in self.names:
+            return
+        meant = nearest(value, map(str, self.names)) if isinstance(value, str) else None
+        raise Wrong(describe(value), self.accepted, f'did you mean "{meant}"?' if meant else "")
+
+
+@frozen
+class Line:
+    """One line of printable text: no control, bidirectional or line-breaking characters.
+
+    Quotes, braces, comment ends, backslashes and trigraphs are accepted: who writes the text into C neutralises them.
+    """
+
+    shortest: int = 0
+
+    @property
+    def accepted(self) -> str:
+        return f"one line of printable text of {self.shortest} to {LONGEST_LINE} characters"
+
+    def check(self, value: str) -> None:
+        if not self.shortest <= len(value) <= LONGEST_LINE:
+            raise Wrong(f"a text of {len(value)} characters", self.accepted)
+        for character in value:
+            if category(character) in UNPRINTABLE:
+                name = f"U+{ord(character):04X}"
+                raise Wrong(f"the character {name} in {visible(value)}", self.accepted, f"remove {name}")
+
+
+@frozen
+class Identifier:
+    """A C identifier that can be the prefix of every emitted symbol and the stem of every emitted file."""
+
+    accepted: ClassVar[str] = IDENTIFIER_RULE
+
+    def check(self, value: str) -> None:
+        fault = identifier_fault(value)
+        if fault:
+            raise Wrong(f"{describe(value)}, {fault}", self.accepted, "choose another name")
+
+
+@frozen
+class TargetName:
+    """The name of a target profile, which is also the stem of its file."""
+
+    accepted: ClassVar[str] = TARGET_RULE
+
+    def check(self, value: str) -> None:
+        if not is_target_name(value):
+            raise Wrong(describe(value), self.accepted)
+
+
+@frozen
+class Items:
+    """A list of ``least`` to ``most`` items."""
+
+    least: int
+    most: int
+    what: str
+    remedy: str = ""
+
+    @property
+    def accepted(self) -> str:
+        counts = str(self.least) if self.least == self.most else f"{self.least} to {self.most}"
+        return f"a list of {counts} {self.what}"
+
+    def check_length(self, raw: object) -> None:
+        if not isinstance(raw, list) or not self.least <= len(raw) <= self.most:
+            raise Wrong(describe(raw), self.accepted, self.remedy)
+
+    def check_first(self, first: object) -> None:
+        """A list of this kind may start with anything."""
+
+
+@frozen
+class Polynomial:
+    """A list of coefficients, highest power first, whose first one is not zero."""
+
+    lowest_order: int
+
+    @property
+    def accepted(self) -> str:
+        return (
+            f"a list of {self.lowest_order + 1} to {HIGHEST_ORDER + 1} numbers, highest power first"
+            f" (order {self.lowest_order} to {HIGHEST_ORDER})"
+        )
+
+    def check_length(self, raw: object) -> None:
+        if not isinstance(raw, list) or not raw:
+            raise Wrong(describe(raw), self.accepted)
+        if not self.lowest_order <= len(raw) - 1 <= HIGHEST_ORDER:
+            raise Wrong(f"{describe(raw)} (order {len(raw) - 1})", self.accepted)
+
+    def check_first(self, first: object) -> None:
+        if not isinstance(first, bool) and isinstance(first, int | Decimal) and first == 0:
+            raise Wrong("a first coefficient of 0", "a first coefficient other than 0", "leave out the leading zeros")
+
+
+ValueLimit: TypeAlias = Number | Whole | Choice | Line | Identifier | TargetName
+ListLimit: TypeAlias = Items | Polynomial

@@ -1,0 +1,176 @@
+"""Interval arithmetic over a Program: what every sum can reach, whatever the states hold.
+
+Rigorous: states range over their whole words, words written in the same sample over what their step can produce.
+Every partial sum is covered in any order of the terms, the rounding offset included, since a signed overflow is
+undefined in C.
+"""
+
+from attrs import frozen
+
+from afterkick.errors import Problem, Refused
+from afterkick.fixed.narrow import rounding_offset, shift_right
+from afterkick.fixed.program import Program, Role, Sum, Term
+
+__all__ = ["Analysis", "Interval", "SumRange", "analyse", "largest_partial_sum", "require_valid", "sum_range"]
+
+ACCUMULATOR_WIDTHS = (32, 64)
+WIDEST_DATA = 32
+
+
+@frozen
+class Interval:
+    """The integers from ``lowest`` to ``highest``."""
+
+    lowest: int
+    highest: int
+
+    def __contains__(self, other: object) -> bool:
+        return isinstance(other, Interval) and self.lowest <= other.lowest and other.highest <= self.highest
+
+    @classmethod
+    def of_word(cls, bits: int) -> "Interval":
+        """All that a word of that many bits holds."""
+        return cls(-(1 << (bits - 1)), (1 << (bits - 1)) - 1)
+
+
+@frozen
+class SumRange:
+    """What a sum can reach."""
+
+    magnitude: int
+    """No partial sum, in any order of the terms and with the rounding offset, has a larger magnitude."""
+    result: Interval
+    """After the right shift, before the overflow rule."""
+
+
+def largest_partial_sum(terms: tuple[Term, ...], ranges: dict[str, Interval], offset: int) -> int:
+    """The largest magnitude of any partial sum, of any product and of any factor."""
+    up = down = 0
+    factors = [1]
+    for term in terms:
+        reach = ranges[term.word]
+        ends = (term.factor * reach.lowest, term.factor * reach.highest)
+        up += max(0, *ends)
+        down += max(0, -min(ends))
+        factors.append(abs(term.factor))
+    return max(up + offset, down, *factors)
+
+
+def sum_range(step: Sum, ranges: dict[str, Interval]) -> SumRange:
+    """The reach of a sum, given that of the words it reads."""
+    lowest = sum(min(t.factor * ranges[t.word].lowest, t.factor * ranges[t.word].highest) for t in step.terms)
+    highest = sum(max(t.factor * ranges[t.word].lowest, t.factor * ranges[t.word].highest) for t in step.terms)
+    offset = rounding_offset(step.right_shift, step.rounding)
+    # Every rounding rule is monotonic, so the ends of the result come from the ends of the sum.
+    result = Interval(
+        shift_right(lowest, step.right_shift, step.rounding), shift_right(highest, step.right_shift, step.rounding)
+    )
+    return SumRange(largest_partial_sum(step.terms, ranges, offset), result)
+
+
+@frozen
+class Analysis:
+    """What interval arithmetic says about a Program."""
+
+    faults: tuple[str, ...]
+    """Why the program is not valid; empty where it is."""
+    may_overflow: frozenset[str]
+    """The words whose overflow rule can come into play; for all others it is proved that it can't."""
+
+
+def analyse(program: Program) -> Analysis:
+    """Walk through one sample and find every word that is unknown, unwritten, or too small for what it gets.
+
+    A fault that hides what comes after it ends the walk.
+    """
+    faults = _word_faults(program)
+    if faults:
+        return Analysis(faults, frozenset(word.name for word in program.words))
+    found: list[str] = []
+    may_overflow: set[str] = set()
+    known = {word.name: Interval.of_word(word.bits) for word in program.words}
+    ranges = {word.name: known[word.name] for word in program.words if word.role in (Role.INPUT, Role.STATE)}
+    written: set[str] = set()
+    for step in program.steps:
+        sources = [term.word for term in step.terms] if isinstance(step, Sum) else [step.source]
+        missing = [name for name in (*sources, step.dest) if name not in known]
+        unwritten = [name for name in sources if name in known and name not in ranges]
+        found += [f"the step that writes {step.dest} uses the unknown word {name}" for name in missing]
+        found += [f"the step that writes {step.dest} reads {name} before it is written" for name in unwritten]
+        if missing or unwritten:
+            break
+        dest = program.word(step.dest)
+        if dest.role is Role.INPUT:
+            found.append(f"the input {dest.name} is written")
+        if dest.role is not Role.STATE and dest.name in written:
+            found.append(f"{dest.name} is written twice")
+        written.add(dest.name)
+        if isinstance(step, Sum):
+            faults = _sum_faults(step, ranges)
+            if faults:
+                found += faults
+                break
+            result = sum_range(step, ranges).result
+            if result not in known[dest.name]:
+                may_overflow.add(dest.name)
+                result = known[dest.name]
+        else:
+            if dest.bits != program.word(step.source).bits:
+                found.append(f"{step.source} and {dest.name} differ in width")
+            result = ranges[step.source]
+        # A state read later in the same sample may hold the new value, in the next one the old: keep the whole word.
+        ranges[dest.name] = known[dest.name] if dest.role is Role.STATE else result
+    else:
+        if program.output not in written:
+            found.append(f"the output {program.output} is never written")
+    return Analysis(tuple(found), frozenset(may_overflow))
+
+
+def require_valid(program: Program) -> Analysis:
+    """The analysis of a valid program.
+
+    :raises Refused: naming every fault.
+    """
+    analysis = analyse(program)
+    if analysis.faults:
+        raise Refused(
+            Problem(f"program {program.name}", fault, "a program whose sums can't overflow", "narrower coefficients")
+            for fault in analysis.faults
+        )
+    return analysis
+
+
+def _word_faults(program: Program) -> tuple[str, ...]:
+    found = []
+    names = [word.name for word in program.words]
+    found += [f"the word {name} is declared twice" for name in sorted({n for n in names if names.count(n) > 1})]
+    roles = {word.name: word.role for word in program.words}
+    for word in program.words:
+        widest = 64 if word.role is Role.TEMPORARY else WIDEST_DATA
+        if not 2 <= word.bits <= widest:
+            found.append(f"the word {word.name} has {word.bits} bits, not 2 to {widest}")
+    if roles.get(program.input) is not Role.INPUT:
+        found.append(f"the input {program.input} is not an input word")
+    if roles.get(program.output) is not Role.OUTPUT:
+        found.append(f"the output {program.output} is not an output word")
+    return tuple(found)
+
+
+def _sum_faults(step: Sum, ranges: dict[str, Interval]) -> list[str]:
+    found = []
+    if step.accumulator_bits not in ACCUMULATOR_WIDTHS:
+        found.append(f"the accumulator of {step.dest} has {step.accumulator_bits} bits, not 32 or 64")
+    if not 0 <= step.right_shift <= step.accumulator_bits - 2:
+        found.append(f"the sum of {step.dest} is shifted right by {step.right_shift} places")
+        return found
+    if any(term.shift < 0 for term in step.terms):
+        found.append(f"the sum of {step.dest} has a term with a negative shift")
+        return found
+    if not step.terms:
+        found.append(f"the sum of {step.dest} has no terms")
+    magnitude = sum_range(step, ranges).magnitude
+    if magnitude > (1 << (step.accumulator_bits - 1)) - 1:
+        found.append(
+            f"a partial sum of {step.dest} can reach {magnitude}, more than {step.accumulator_bits} bits hold"
+        )
+    return found

@@ -1,0 +1,208 @@
+"""The sampled filter: exact in z, evaluated to any accuracy that is asked for."""
+
+from collections import Counter
+from collections.abc import Callable
+from functools import cached_property, lru_cache
+
+from attrs import frozen
+from flint import acb, arb, fmpq
+
+from afterkick.design.schema import Sampling
+from afterkick.model.model import Model
+from afterkick.model.partial_fractions import Mode, expand, product_taylor
+from afterkick.numbers import accurate, certified, is_exactly_zero
+from afterkick.sampling.holds import INVARIANT_METHODS, invariant_transfer
+from afterkick.sampling.maps import backward_difference_transfer, bilinear_transfer, matched_transfer
+from afterkick.sampling.pulse_transfer import PulseTransfer, expanded
+from afterkick.sampling.sections import Section, paired
+
+__all__ = ["ParallelSection", "Sampled", "Section"]
+
+
+@frozen
+class ParallelSection:
+    """(b[0] + b[1]/z) / (1 + a[1]/z + a[2]/z^2), one term of a sum."""
+
+    b: tuple[arb, arb]
+    a: tuple[arb, arb, arb]
+
+
+# Compared by identity: a Sampled is a description whose numbers are computed, and cached, when asked for.
+@frozen(eq=False)
+class Sampled:
+    """z^-delay_samples times a pulse transfer function of ``order`` poles."""
+
+    model: Model
+    options: Sampling
+    delay_samples: int
+    """Whole samples of dead time."""
+    fraction_s: fmpq
+    """What the whole samples leave of the dead time."""
+    warnings: tuple[str, ...] = ()
+
+    @property
+    def rate_hz(self) -> fmpq:
+        """Samples per second."""
+        return self.options.rate_hz
+
+    @property
+    def method(self) -> str:
+        """The sampling method's name."""
+        return self.options.method
+
+    @property
+    def period_s(self) -> fmpq:
+        """T."""
+        return 1 / self.options.rate_hz
+
+    @property
+    def first_sample(self) -> str:
+        """What impulse invariance makes of a jump at t = 0: "half" or "full" of it."""
+        return self.options.first_sample or "half"
+
+    def transfer(self, bits: int = 128) -> PulseTransfer:
+        """The factored pulse transfer function, with balls of at least ``bits`` working bits."""
+        return _transfer(self, bits)
+
+    def sections(self, bits: int) -> tuple[Section, ...]:
+        """The cascade: each coefficient exact or within 2^-bits of the largest of its group, 1+a1+a2 within 2^-bits of
+        itself."""
+        return _sections(self, bits)
+
+    @cached_property
+    def marginal(self) -> bool:
+        """Whether a pole of the sampled filter is exactly on the unit circle."""
+        return any(
+            pole.on_circle or pole.at_one() or (pole.real and pole.value.is_exact() and pole.value.real == -1)
+            for pole in self.transfer().poles
+        )
+
+    @cached_property
+    def stable(self) -> bool:
+        """Whether every pole is strictly inside the unit circle."""
+
+        def magnitudes() -> list[arb]:
+            return [abs(pole.value) - 1 for pole in _compute(self).poles] if not self.marginal else []
+
+        found = certified(
+            magnitudes, lambda values: all(bool(v < 0) or bool(v > 0) for v in values), "the radius of a sampled pole"
+        )
+        return not self.marginal and all(v < 0 for v in found)
+
+    def pulse_modes(self) -> tuple[Mode, ...]:
+        """c_j of g[n] = sum over j of c_j C(n-1, j) p^(n-1-j), n > number of poles at z = 0, at the working precision.
+
+        The whole-sample delay is not included.
+        """
+        transfer = _compute(self)
+        zeros = [(root.value, 1) for root in transfer.zeros]
+        zeros += [(root.value.conjugate(), 1) for root in transfer.zeros if not root.real]
+        times = Counter(pole.name for pole in transfer.poles if not is_exactly_zero(pole.value))
+        named = {pole.name: pole for pole in transfer.poles if pole.name in times}
+        poles = [(pole.value, pole.real, times[name]) for name, pole in named.items()]
+        # in powers of z, what the numerator lacks in degree is zeros at z = 0; more zeros than poles are poles there
+        surplus = sum(pole.degree * times[name] for name, pole in named.items()) - len(zeros) - transfer.leading
+        if surplus > 0:
+            zeros.append((acb(0), surplus))
+        elif surplus < 0:
+            poles.append((acb(0), True, -surplus))
+        return expand(product_taylor(transfer.gain, zeros), poles)[: len(named)]
+
+    def first_samples(self, number: int) -> list[arb]:
+        """g[0] .. g[number-1] by series division, without the whole-sample delay."""
+        transfer = _compute(self)
+        numerator = [arb(0)] * transfer.leading + expanded(transfer.zeros)
+        denominator = expanded(transfer.poles)
+        samples: list[arb] = []
+        for n in range(number):
+            value = transfer.gain * numerator[n] if n < len(numerator) else arb(0)
+            for j in range(1, min(n, len(denominator) - 1) + 1):
+                value -= denominator[j] * samples[n - j]
+            samples.append(value)
+        return samples
+
+    def parallel(self, bits: int) -> tuple[arb, tuple[ParallelSection, ...]] | None:
+        """The direct part and first-order-numerator terms of the sum form; None for repeated poles or poles at 0."""
+        if any(times > 1 for times in self.model.poles.values()) or any(
+            is_exactly_zero(pole.value) for pole in self.transfer().poles
+        ):
+            return None
+
+        def compute() -> tuple[arb, tuple[ParallelSection, ...]]:
+            modes = self.pulse_modes()
+            direct = self.first_samples(1)[0]
+            for mode in modes:
+                residue = (mode.coefficients[0] / mode.pole).real
+                direct -= residue if mode.real else 2 * residue
+            return direct, tuple(_parallel_section(mode) for mode in modes)
+
+        def enough(found: tuple[arb, tuple[ParallelSection, ...]]) -> bool:
+            return all(_within(section.b, bits) and _within(section.a, bits) for section in found[1])
+
+        return certified(compute, enough, "the sum form of the sampled filter")
+
+
+def _parallel_section(mode: Mode) -> ParallelSection:
+    # c p^(n-1) for n >= 1 is c/p * p^n less its value at n = 0, which the direct part takes up
+    residue, pole = mode.coefficients[0] / mode.pole, mode.pole
+    if mode.real:
+        return ParallelSection((residue.real, arb(0)), (arb(1), -pole.real, arb(0)))
+    square = pole.real * pole.real + pole.imag * pole.imag
+    return ParallelSection(
+        (2 * residue.real, -2 * (residue * pole.conjugate()).real), (arb(1), -2 * pole.real, square)
+    )
+
+
+def _compute(sampled: Sampled) -> PulseTransfer:
+    """The transfer at the present working precision or the lowest one above it that isolates the zeros."""
+    found = certified(lambda: _attempt(sampled), lambda transfer: transfer is not None, "the zeros of the sampled filter")
+    assert found is not None
+    return found
+
+
+def _attempt(sampled: Sampled) -> PulseTransfer | None:
+    model, options, period = sampled.model, sampled.options, sampled.period_s
+    if options.method in INVARIANT_METHODS:
+        return invariant_transfer(model, options.method, period, sampled.fraction_s, sampled.first_sample)
+    methods: dict[str, Callable[[], PulseTransfer]] = {
+        "bilinear": lambda: bilinear_transfer(model, period, options.match_hz),
+        "backward-difference": lambda: backward_difference_transfer(model, period),
+        "matched": lambda: matched_transfer(model, period, options.match_hz, options.zeros_at_infinity or "half-rate"),
+    }
+    return methods[options.method]()
+
+
+@lru_cache(maxsize=64)
+def _transfer(sampled: Sampled, bits: int) -> PulseTransfer:
+    def compute() -> PulseTransfer:
+        return _compute(sampled)
+
+    def enough(transfer: PulseTransfer) -> bool:
+        return all(accurate(root.value, bits // 2) for root in transfer.poles) and accurate(transfer.gain, bits // 2)
+
+    return certified(compute, enough, "the sampled filter")
+
+
+@lru_cache(maxsize=256)
+def _sections(sampled: Sampled, bits: int) -> tuple[Section, ...]:
+    def compute() -> tuple[Section, ...] | None:
+        transfer = _attempt(sampled)
+        return None if transfer is None else paired(transfer)
+
+    def enough(sections: tuple[Section, ...] | None) -> bool:
+        return sections is not None and all(
+            _within(s.b, bits) and _within(s.a, bits) and accurate(s.a_at_one, bits) for s in sections
+        )
+
+    found = certified(compute, enough, "the sections of the sampled filter")
+    assert found is not None
+    return found
+
+
+def _within(group: tuple[arb, ...], bits: int) -> bool:
+    """Whether every radius is at most 2^-bits of the largest coefficient."""
+    largest = max(float(abs(value).mid()) for value in group)
+    if largest == 0.0:
+        return all(value.is_exact() for value in group)
+    limit = abs(max(group, key=lambda value: float(abs(value).mid())).mid()) * arb(2) ** -bits
+    return all(bool(value.rad() <= limit) for value in group)

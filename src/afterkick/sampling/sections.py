@@ -1,0 +1,129 @@
+"""A pulse transfer function as sections of order 1 and 2.
+
+Poles nearest the unit circle choose first, each taking the zeros nearest to it; the cascade runs from the calmest
+section to the most resonant one (common practice).  Each section but the first has gain 1 at z = 1, or at z = -1 where
+it has a zero at z = 1; the first carries the rest of the gain.
+"""
+
+from collections.abc import Sequence
+
+from attrs import frozen
+from flint import arb
+
+from afterkick.numbers import mid_float
+from afterkick.sampling.pulse_transfer import PulseTransfer, ZRoot, expanded
+
+__all__ = ["Section", "paired"]
+
+
+@frozen
+class Section:
+    """H = (b[0] + b[1]/z + b[2]/z^2) / (a[0] + a[1]/z + a[2]/z^2); a[0] is exactly 1."""
+
+    b: tuple[arb, arb, arb]
+    a: tuple[arb, arb, arb]
+
+    @property
+    def order(self) -> int:
+        """1 or 2."""
+        return 1 if self.a[2].is_zero() and self.b[2].is_zero() else 2
+
+    @property
+    def b_at_one(self) -> arb:
+        """b[0] + b[1] + b[2]: near z = 1 the number that decides the gain."""
+        return self.b[0] + self.b[1] + self.b[2]
+
+    @property
+    def a_at_one(self) -> arb:
+        """1 + a[1] + a[2]: near z = 1 the number that decides the gain."""
+        return self.a[0] + self.a[1] + self.a[2]
+
+
+def paired(transfer: PulseTransfer) -> tuple[Section, ...] | None:
+    """The sections, at the working precision ``transfer`` was computed with; None: more bits needed."""
+    poles = _pole_groups(transfer.poles)
+    zeros = sorted(transfer.zeros, key=_place)
+    assigned: list[tuple[tuple[ZRoot, ...], list[ZRoot]]] = []
+    for index, group in enumerate(poles):
+        pairs_to_place = sum(not zero.real for zero in zeros)
+        later = sum(_degree(other) == 2 for other in poles[index + 1 :])
+        taken = _nearest(group, zeros, must_take_pair=pairs_to_place > later)
+        for zero in taken:
+            zeros.remove(zero)
+        assigned.append((group, taken))
+    late = transfer.leading
+    sections = []
+    for group, taken in assigned:
+        room = min(late, _degree(group) - _degree(taken))
+        late -= room
+        sections.append(_section(group, taken, room))
+    assert late == 0 and not zeros, "a numerator of higher order than its denominator"
+    scales = [_unit_scale(section, *roots) for section, roots in zip(sections, assigned, strict=True)]
+    if any(scale.contains(0) or not scale.is_finite() for scale in scales):
+        return None
+    scales[-1] = transfer.gain
+    for scale in scales[:-1]:
+        scales[-1] /= scale
+    return tuple(
+        Section(_three([value * scale for value in section.b]), section.a)
+        for section, scale in reversed(list(zip(sections, scales, strict=True)))
+    )
+
+
+def _degree(roots: Sequence[ZRoot]) -> int:
+    return sum(root.degree for root in roots)
+
+
+def _rounded(value: float) -> float:
+    """Twelve digits: an order that does not depend on the working precision."""
+    return float(f"{value:.11e}")
+
+
+def _place(root: ZRoot) -> tuple[float, float]:
+    return _rounded(mid_float(root.value.real)), _rounded(mid_float(root.value.imag))
+
+
+def _calmness(root: ZRoot) -> tuple[float, float, float]:
+    return (-_rounded(mid_float(abs(root.value))), *_place(root))
+
+
+def _pole_groups(poles: Sequence[ZRoot]) -> list[tuple[ZRoot, ...]]:
+    """Pairs, and real poles two by two; the most resonant first, a single real pole as it comes."""
+    real = sorted((pole for pole in poles if pole.real), key=_calmness)
+    groups: list[tuple[ZRoot, ...]] = [(pole,) for pole in poles if not pole.real]
+    groups += [tuple(real[i : i + 2]) for i in range(0, len(real), 2)]
+    return sorted(groups, key=lambda group: _calmness(group[0]))
+
+
+def _distance(zero: ZRoot, group: Sequence[ZRoot]) -> tuple[float, float, float]:
+    return (_rounded(mid_float(abs(zero.value - group[0].value))), *_place(zero))
+
+
+def _nearest(group: Sequence[ZRoot], zeros: Sequence[ZRoot], must_take_pair: bool) -> list[ZRoot]:
+    room = _degree(group)
+    ordered = sorted(zeros, key=lambda zero: _distance(zero, group))
+    if room == 2:
+        pairs = [zero for zero in ordered if not zero.real]
+        if pairs and (must_take_pair or not ordered[0].real):
+            return pairs[:1]
+    return [zero for zero in ordered if zero.real][:room]
+
+
+def _section(poles: Sequence[ZRoot], zeros: Sequence[ZRoot], late: int) -> Section:
+    a = expanded(poles)
+    b = [arb(0)] * late + expanded(zeros)
+    return Section(_three(b), _three(a))
+
+
+def _three(values: Sequence[arb]) -> tuple[arb, arb, arb]:
+    first, second, third = [*values, arb(0), arb(0)][:3]
+    return first, second, third
+
+
+def _unit_scale(section: Section, poles: Sequence[ZRoot], zeros: Sequence[ZRoot]) -> arb:
+    """What brings the gain at z = 1, or at z = -1 where a zero or pole is at 1, to one."""
+    if not any(root.at_one() for root in (*poles, *zeros)):
+        return section.a_at_one / section.b_at_one
+    b, a = section.b, section.a
+    top, bottom = b[0] - b[1] + b[2], a[0] - a[1] + a[2]
+    return arb(1) if top.contains(0) or bottom.contains(0) else bottom / top
