@@ -33,6 +33,7 @@ __all__ = [
     "exact_number",
     "nearest",
     "plain",
+    "visible",
 ]
 
 HIGHEST_ORDER = 16
@@ -48,7 +49,7 @@ UNPRINTABLE = frozenset({"Cc", "Cf", "Co", "Cs", "Zl", "Zp"})
 class Wrong(Exception):
     """One value is not accepted; the reader turns it into a Problem by adding the key path."""
 
-    def __init__(self, found: str, accepted: str, remedy: str = "") -> None:
+    def __init__(self, found: str, accepted: str, remedy: str) -> None:
         super().__init__(found, accepted, remedy)
         self.found = found
         self.accepted = accepted
@@ -63,9 +64,9 @@ class Unreadable:
 
 
 def visible(text: str) -> str:
-    """``text`` in double quotes, cut to a line, what a terminal can't show as escapes."""
+    """``text`` in double quotes, cut to a line, with escapes for what a terminal can't show."""
     cut = text if len(text) <= LONGEST_SHOWN else text[:LONGEST_SHOWN] + "..."
-    body = "".join(c if category(c) not in UNPRINTABLE else c.encode("unicode_escape").decode("ascii") for c in cut)
+    body = "".join(c if c.isprintable() else c.encode("unicode_escape").decode("ascii") for c in cut)
     return f'"{body}"'
 
 
@@ -79,7 +80,7 @@ def describe(value: object) -> str:
         case int():
             return str(value) if value.bit_length() < 4 * LONGEST_SHOWN else "an integer of absurd size"
         case Decimal():
-            return str(value) if len(value.as_tuple().digits) < LONGEST_SHOWN else f"{value:.6e} (in full)"
+            return str(value) if len(value.as_tuple().digits) < LONGEST_SHOWN else f"{value:.6e}..."
         case Unreadable():
             return f"the number {value.text[:LONGEST_SHOWN]}{'...' if len(value.text) > LONGEST_SHOWN else ''}"
         case list():
@@ -99,8 +100,9 @@ def nearest(text: str, names: Iterable[str]) -> str | None:
     """The name that was probably meant."""
     from difflib import get_close_matches  # only a wrong file pays for it
 
-    close = get_close_matches(text[:LONGEST_LINE].lower(), list(names), n=1)
-    return close[0] if close else None
+    by_lower_case = {name.lower(): name for name in names}
+    close = get_close_matches(text[:LONGEST_LINE].lower(), by_lower_case, n=1)
+    return by_lower_case[close[0]] if close else None
 
 
 def exact_number(raw: object) -> fmpq:
@@ -114,14 +116,14 @@ def exact_number(raw: object) -> fmpq:
         case int() if raw.bit_length() <= HIGHEST_EXPONENT * BITS_PER_DIGIT:
             return rational(raw)
         case Decimal() if not raw.is_finite():
-            raise Wrong(describe(raw), "a finite number")
+            raise Wrong(describe(raw), "a finite number", "write the number that is meant")
         # The exponent is looked at before any power of ten is formed.
         case Decimal() if abs(raw.adjusted()) <= HIGHEST_EXPONENT and len(raw.as_tuple().digits) <= MOST_DIGITS:
             return rational(raw)
         case int() | Decimal() | Unreadable():
             size = f"of magnitude 1e-{HIGHEST_EXPONENT} to 1e{HIGHEST_EXPONENT} with at most {MOST_DIGITS} digits"
-            raise Wrong(describe(raw), f"a number {size}")
-    raise Wrong(describe(raw), "a number", "write the number without quotes" if isinstance(raw, str) else "")
+            raise Wrong(describe(raw), f"a number {size}", "choose units in which the numbers are moderate")
+    raise Wrong(describe(raw), "a number", "write one number, without quotes or brackets")
 
 
 @frozen
@@ -155,7 +157,7 @@ class Number:
             or (self.most is not None and value > self.most)
             or (self.nonzero and value == 0)
         ):
-            raise Wrong(plain(value), self.accepted, self.remedy)
+            raise Wrong(plain(value), self.accepted, self.remedy or "write a number in that range")
 
 
 @frozen
@@ -171,7 +173,8 @@ class Whole:
 
     def check(self, value: int) -> None:
         if not self.least <= value <= self.most:
-            raise Wrong(describe(value), self.accepted)
+            nearest_whole = min(max(value, self.least), self.most)
+            raise Wrong(describe(value), self.accepted, f"the nearest is {nearest_whole}")
 
 
 @frozen
@@ -189,7 +192,7 @@ class Choice:
         if value in self.names:
             return
         meant = nearest(value, map(str, self.names)) if isinstance(value, str) else None
-        raise Wrong(describe(value), self.accepted, f'did you mean "{meant}"?' if meant else "")
+        raise Wrong(describe(value), self.accepted, f'did you mean "{meant}"?' if meant else "choose one of these")
 
 
 @frozen
@@ -207,7 +210,8 @@ class Line:
 
     def check(self, value: str) -> None:
         if not self.shortest <= len(value) <= LONGEST_LINE:
-            raise Wrong(f"a text of {len(value)} characters", self.accepted)
+            remedy = "shorten it" if value else "write a text or leave the key out"
+            raise Wrong(f"a text of {len(value)} characters", self.accepted, remedy)
         for character in value:
             if category(character) in UNPRINTABLE:
                 name = f"U+{ord(character):04X}"
@@ -234,7 +238,7 @@ class TargetName:
 
     def check(self, value: str) -> None:
         if not is_target_name(value):
-            raise Wrong(describe(value), self.accepted)
+            raise Wrong(describe(value), self.accepted, "the command afterkick targets lists the profiles")
 
 
 @frozen
@@ -244,7 +248,7 @@ class Items:
     least: int
     most: int
     what: str
-    remedy: str = ""
+    remedy: str = "write each item between the brackets, commas between them"
 
     @property
     def accepted(self) -> str:
@@ -253,7 +257,8 @@ class Items:
 
     def check_length(self, raw: object) -> None:
         if not isinstance(raw, list) or not self.least <= len(raw) <= self.most:
-            raise Wrong(describe(raw), self.accepted, self.remedy)
+            too_long = isinstance(raw, list) and len(raw) > self.most > self.least
+            raise Wrong(describe(raw), self.accepted, "split the design into two" if too_long else self.remedy)
 
     def check_first(self, first: object) -> None:
         """A list of this kind may start with anything."""
@@ -274,9 +279,11 @@ class Polynomial:
 
     def check_length(self, raw: object) -> None:
         if not isinstance(raw, list) or not raw:
-            raise Wrong(describe(raw), self.accepted)
+            raise Wrong(describe(raw), self.accepted, "write the coefficients in brackets, with commas between them")
         if not self.lowest_order <= len(raw) - 1 <= HIGHEST_ORDER:
-            raise Wrong(f"{describe(raw)} (order {len(raw) - 1})", self.accepted)
+            too_low = 'a gain alone is no filter: put one with its filter into kind = "blocks"'
+            remedy = "split the filter into two designs" if len(raw) > HIGHEST_ORDER else too_low
+            raise Wrong(f"{describe(raw)} (order {len(raw) - 1})", self.accepted, remedy)
 
     def check_first(self, first: object) -> None:
         if not isinstance(first, bool) and isinstance(first, int | Decimal) and first == 0:

@@ -11,7 +11,7 @@ from decimal import Decimal, InvalidOperation
 from functools import cache
 from tomllib import TOMLDecodeError, loads
 from types import SimpleNamespace
-from typing import Any
+from typing import Annotated, Any
 
 import attrs
 from cattrs import Converter
@@ -63,11 +63,13 @@ def read_design(text: str, source: str = "design") -> Design:
 
 
 def _parse(text: str, source: str) -> dict[str, Any]:
-    def refused(found: str, accepted: str, remedy: str = "") -> Refused:
+    def refused(found: str, accepted: str, remedy: str) -> Refused:
         return Refused(Problem(source, found, accepted, remedy))
 
     if len(text) > LONGEST_DESIGN:
-        raise refused(f"{len(text)} characters", f"a design file of at most {LONGEST_DESIGN} characters")
+        raise refused(
+            f"{len(text)} characters", f"a design file of at most {LONGEST_DESIGN}", "check the path: this is no design"
+        )
     text = text.removeprefix("\ufeff")  # some editors put a byte-order mark in front
     try:
         return loads(text, parse_float=_exact_decimal)
@@ -80,11 +82,13 @@ def _parse(text: str, source: str) -> dict[str, Any]:
             "correct this place: text goes in double quotes, lists in [ ], and each key is written once",
         ) from None
     except RecursionError:
-        raise refused("lists or tables nested too deeply", "lists nested at most two deep") from None
+        raise refused("lists or tables nested too deeply", "lists nested at most two deep", "remove brackets") from None
     except ValueError:  # Python refuses to read integers of thousands of digits, and doesn't say where
         before = text[: match.start()] if (match := re.search(r"[0-9_]{1000}", text)) else text
         line = before.count("\n") + 1
-        raise refused(f"an integer of thousands of digits at line {line}", "numbers of at most 400 digits") from None
+        raise refused(
+            f"an integer of thousands of digits at line {line}", "numbers of at most 400 digits", "shorten it"
+        ) from None
 
 
 def _exact_decimal(text: str) -> Decimal | Unreadable:
@@ -123,8 +127,8 @@ def _converter() -> Converter:
     hook = converter.register_structure_hook
     hook(fmpq, lambda raw, _: exact_number(raw))
     hook(int, lambda raw, _: _integer(raw))
-    hook(str, lambda raw, _: _of_type(raw, str, "a text in quotes"))
-    hook(bool, lambda raw, _: _of_type(raw, bool, "true or false"))
+    hook(str, lambda raw, _: _of_type(raw, str, "a text", "write it in double quotes"))
+    hook(bool, lambda raw, _: _of_type(raw, bool, "true or false", "write it without quotes"))
     converter.register_structure_hook_factory(attrs.has, lambda table: _table_hook(converter, table))
     converter.register_structure_hook_func(
         lambda kind: hasattr(kind, "__metadata__"), lambda raw, kind: _limited(converter, raw, kind)
@@ -134,9 +138,9 @@ def _converter() -> Converter:
     return converter
 
 
-def _of_type(raw: object, kind: type, accepted: str) -> Any:
+def _of_type(raw: object, kind: type, accepted: str, remedy: str) -> Any:
     if not isinstance(raw, kind):
-        raise Wrong(describe(raw), accepted)
+        raise Wrong(describe(raw), accepted, remedy)
     return raw
 
 
@@ -148,16 +152,25 @@ def _integer(raw: object) -> int:
             return raw
         case Decimal() if raw.is_finite() and raw.adjusted() < 9 and raw == int(raw):
             raise Wrong(describe(raw), "an integer", f"write {int(raw)}")
-    raise Wrong(describe(raw), "an integer")
+    raise Wrong(describe(raw), "an integer", "write one integer, without quotes, point or exponent")
 
 
 def _limited(converter: Converter, raw: Any, kind: Any) -> Any:
     """A value or a list whose annotation carries a limit."""
     limit: ValueLimit | ListLimit = kind.__metadata__[0]
-    if not isinstance(limit, Items | Polynomial):
+    if isinstance(limit, Items | Polynomial):
+        return _limited_list(converter, raw, kind.__origin__, limit)
+    try:
         value = converter.structure(raw, kind.__origin__)
-        limit.check(value)
-        return value
+    except Wrong as error:
+        if kind.__origin__ is fmpq:  # what numbers are too large or not finite is the same everywhere
+            raise
+        raise Wrong(error.found, limit.accepted, error.remedy) from None
+    limit.check(value)
+    return value
+
+
+def _limited_list(converter: Converter, raw: Any, kind: Any, limit: ListLimit) -> Any:
     limit.check_length(raw)
     errors: list[Exception] = []
     try:
@@ -165,7 +178,7 @@ def _limited(converter: Converter, raw: Any, kind: Any) -> Any:
     except Wrong as error:
         errors.append(error)
     try:
-        value = converter.structure(raw, kind.__origin__)
+        value = converter.structure(raw, kind)
     except IterableValidationError as error:
         errors.extend(error.exceptions)
     if errors:
@@ -176,17 +189,16 @@ def _limited(converter: Converter, raw: Any, kind: Any) -> Any:
 def _tagged_hook(converter: Converter, key: str, tables: dict[str, type]) -> Callable[[Any, Any], Any]:
     """A table whose ``key`` says which of ``tables`` it is."""
     names = Choice(tuple(tables))
+    name_type: Any = Annotated[str, names]
 
     def read(raw: Any, _: Any) -> Any:
         table = _as_table(raw)
         try:
             if key not in table:
                 meant = nearest(key, table)
-                raise Wrong(
-                    "missing", names.accepted, f"rename {visible(meant)} to {key}" if meant else f"add {key} = ..."
-                )
-            tag = converter.structure(table[key], str)
-            names.check(tag)
+                remedy = f"rename {_readable(meant)} to {key}" if meant else f"add {key} = ..."
+                raise Wrong("missing", names.accepted, remedy)
+            tag = converter.structure(table[key], name_type)
         except Wrong as error:
             raise ClassValidationError("tag", [_at(key, error)], dict) from None
         return converter.structure({name: value for name, value in table.items() if name != key}, tables[tag])
@@ -196,8 +208,7 @@ def _tagged_hook(converter: Converter, key: str, tables: dict[str, type]) -> Cal
 
 def _as_table(raw: Any) -> dict[str, Any]:
     if not isinstance(raw, dict):
-        remedy = "a table's name goes in single brackets" if isinstance(raw, list) else ""
-        raise Wrong(describe(raw), "a table", remedy)
+        raise Wrong(describe(raw), "a table", "write its name once in single brackets, and its keys below")
     return raw
 
 
@@ -225,21 +236,23 @@ def _table_hook(converter: Converter, table: type) -> Callable[[Any, Any], Any]:
     rule = RULES.get(table)
 
     def read(raw: Any, _: Any) -> Any:
+        written = _as_table(raw)
         errors: list[Exception] = []
-        written: set[str] = set()  # the fields that the file gives, be it under a misspelt key
         values: dict[str, Any] = {}
         partial: dict[str, Any] = dict.fromkeys(field.name for field in fields)
-        for key, value in _as_table(raw).items():
+        given: set[str] = set()
+        misspelt: set[str] = set()
+        for key, value in written.items():
             if key not in known:
-                meant = nearest(key, known)
+                meant = nearest(key, [name for name in known if name not in written])
                 if meant:
-                    written.add(known[meant].name)
+                    misspelt.add(known[meant].name)
                 remedy = f"did you mean {meant}?" if meant else f"remove {_readable(key)}"
                 errors.append(_at(key, Wrong("an unknown key", "only " + ", ".join(known), remedy)))
                 continue
             field = known[key]
-            written.add(field.name)
-            if key in instead and field.name in raw:
+            given.add(field.name)
+            if key in instead and field.name in written:
                 only_one = f"exactly one of {field.name} and {key}"
                 errors.append(_at(key, Wrong(f"both {field.name} and {key}", only_one, "remove one of them")))
                 continue
@@ -251,15 +264,16 @@ def _table_hook(converter: Converter, table: type) -> Callable[[Any, Any], Any]:
                 continue
             values[field.name] = field.metadata[INSTEAD][1](read_value) if key in instead else read_value
         for field in fields:
-            if field.name in written:
+            if field.name in given | misspelt:
                 continue
             if field.default is attrs.NOTHING:
                 errors.append(_at(field.name, _missing(field)))
             else:
                 partial[field.name] = field.default
         reading = SimpleNamespace(**partial | values)
-        if rule:
-            errors.extend(_at(key, flaw) for key, flaw in rule(reading, written))
+        for flaw in rule(reading, given | misspelt) if rule else ():
+            if flaw.where not in misspelt:  # that key has had its message
+                errors.append(_at(flaw.where, Wrong(flaw.found, flaw.accepted, flaw.remedy)))
         if errors:
             refusal = _TableErrors("keys", errors, table)
             refusal.reading = reading

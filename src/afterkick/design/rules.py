@@ -1,7 +1,8 @@
 """Rules between the keys of a table, and between tables.
 
 A rule sees what could be read: each field of the table, None where it is absent or wrong itself, so that a problem
-elsewhere hides none here.  ``given`` are the keys that the file writes.  It yields the key to name, and what is wrong.
+elsewhere hides none here.  ``given`` are the keys that the file writes.  It yields problems whose key path starts at
+the table.
 """
 
 from collections.abc import Callable, Iterator
@@ -9,7 +10,7 @@ from collections.abc import Set as AbstractSet
 from types import SimpleNamespace
 from typing import Any, TypeAlias
 
-from afterkick.design.limits import HIGHEST_ORDER, Wrong, describe, plain
+from afterkick.design.limits import HIGHEST_ORDER, describe, plain
 from afterkick.design.schema import (
     Arithmetic,
     Bandpass,
@@ -24,14 +25,13 @@ from afterkick.design.schema import (
     Pid,
     RootsForm,
     Sampling,
-    Signal,
     Signals,
 )
+from afterkick.errors import Problem
 
 __all__ = ["RULES", "Rule"]
 
-Flaws: TypeAlias = Iterator[tuple[str, Wrong]]
-Rule: TypeAlias = Callable[[SimpleNamespace, AbstractSet[str]], Flaws]
+Rule: TypeAlias = Callable[[SimpleNamespace, AbstractSet[str]], Iterator[Problem]]
 
 FAMILY_KEYS = {
     "butterworth": (),
@@ -47,189 +47,162 @@ OPTION_METHODS = {
 }
 
 
-def _design(table: SimpleNamespace, given: AbstractSet[str]) -> Flaws:
+def _design(table: SimpleNamespace, given: AbstractSet[str]) -> Iterator[Problem]:
     rate = getattr(table.sampling, "rate_hz", None)
     band = getattr(table.budget, "band_hz", None)
     if rate is not None and band is not None and 2 * band >= rate:
-        yield (
+        yield Problem(
             "budget.band_hz",
-            Wrong(
-                plain(band),
-                f"less than half the sampling rate, {plain(rate / 2)}",
-                "a narrower band or a higher rate",
-            ),
+            plain(band),
+            f"less than half the sampling rate, {plain(rate / 2)}",
+            "a narrower band or a higher rate",
         )
 
 
-def _ode(table: SimpleNamespace, given: AbstractSet[str]) -> Flaws:
+def _ode(table: SimpleNamespace, given: AbstractSet[str]) -> Iterator[Problem]:
     if table.output is not None and table.before is not None and len(table.before) > len(table.output) - 1:
         order = len(table.output) - 1
-        yield (
+        yield Problem(
             "before",
-            Wrong(
-                f"a list of {len(table.before)}",
-                f"at most {order} numbers, as the equation has order {order}",
-                "give y, y', ... up to the derivative below the highest",
-            ),
+            f"a list of {len(table.before)}",
+            f"at most {order} numbers, as the equation has order {order}",
+            "give y, y', ... up to the derivative below the highest",
         )
 
 
-def _roots(table: SimpleNamespace, given: AbstractSet[str]) -> Flaws:
+def _roots(table: SimpleNamespace, given: AbstractSet[str]) -> Iterator[Problem]:
     for key in ("poles", "zeros"):
         order = sum(2 if im > 0 else 1 for _, im in getattr(table, key) or ())
         if order > HIGHEST_ORDER:
-            yield (
+            yield Problem(
                 key,
-                Wrong(
-                    f"roots of order {order} (a conjugate pair counts as two)",
-                    f"at most {HIGHEST_ORDER}",
-                    "split the filter into two designs",
-                ),
+                f"roots of order {order} (a conjugate pair counts as two)",
+                f"at most {HIGHEST_ORDER}",
+                "split the filter into two designs",
             )
 
 
-def _matrices(table: SimpleNamespace, given: AbstractSet[str]) -> Flaws:
+def _matrices(table: SimpleNamespace, given: AbstractSet[str]) -> Iterator[Problem]:
     if table.a is None:
         return
     states = len(table.a)
     lists = [(f"a[{i}]", row) for i, row in enumerate(table.a)] + [("b", table.b), ("c", table.c)]
     for key, numbers in lists:
         if numbers is not None and len(numbers) != states:
-            yield (
+            yield Problem(
                 key,
-                Wrong(
-                    f"a list of {len(numbers)}",
-                    f"a list of {states} numbers, as a has {states} rows",
-                    "a is square, and b and c are as long as a",
-                ),
+                f"a list of {len(numbers)}",
+                f"a list of {states} numbers, as a has {states} rows",
+                "a is square, and b and c are as long as a",
             )
 
 
-def _lag(table: SimpleNamespace, given: AbstractSet[str]) -> Flaws:
+def _lag(table: SimpleNamespace, given: AbstractSet[str]) -> Iterator[Problem]:
     accepted = "exactly one of time_constant_s and corner_hz"
     if {"time_constant_s", "corner_hz"} <= given:
-        yield "corner_hz", Wrong("both time_constant_s and corner_hz", accepted, "remove one of them")
+        yield Problem("corner_hz", "both time_constant_s and corner_hz", accepted, "remove one of them")
     if not {"time_constant_s", "corner_hz"} & given:
-        yield "corner_hz", Wrong("neither time_constant_s nor corner_hz", accepted, "add one of them")
+        yield Problem("corner_hz", "neither time_constant_s nor corner_hz", accepted, "add one of them")
 
 
-def _family(table: SimpleNamespace, given: AbstractSet[str]) -> Flaws:
+def _family(table: SimpleNamespace, given: AbstractSet[str]) -> Iterator[Problem]:
     if table.family is None:
         return
     needed = FAMILY_KEYS[table.family]
     for key in ("ripple_db", "stop_db"):
         if key in needed and key not in given:
-            yield (
-                key,
-                Wrong("missing", f'a number, which the family "{table.family}" needs', f"add {key} = ..."),
-            )
+            yield Problem(key, "missing", f'a number, which the family "{table.family}" needs', f"add {key} = ...")
         if key in given and key not in needed:
             users = " or ".join(f'"{family}"' for family, keys in FAMILY_KEYS.items() if key in keys)
-            yield (
-                key,
-                Wrong(f'a key that the family "{table.family}" does not use', f"only with {users}", f"remove {key}"),
+            yield Problem(
+                key, f'a key that the family "{table.family}" does not use', f"only with {users}", f"remove {key}"
             )
     both = needed == ("ripple_db", "stop_db") and None not in (table.ripple_db, table.stop_db)
     if both and table.stop_db <= table.ripple_db:
         remedy = "let the stop band lie below the ripple of the pass band"
-        yield "stop_db", Wrong(plain(table.stop_db), f"more than ripple_db, {plain(table.ripple_db)}", remedy)
+        yield Problem("stop_db", plain(table.stop_db), f"more than ripple_db, {plain(table.ripple_db)}", remedy)
 
 
-def _band(table: SimpleNamespace, given: AbstractSet[str]) -> Flaws:
+def _band(table: SimpleNamespace, given: AbstractSet[str]) -> Iterator[Problem]:
     yield from _family(table, given)
     if None not in (table.low_hz, table.high_hz) and table.low_hz >= table.high_hz:
-        yield (
-            "high_hz",
-            Wrong(plain(table.high_hz), f"more than low_hz, {plain(table.low_hz)}", "exchange the two"),
-        )
+        yield Problem("high_hz", plain(table.high_hz), f"more than low_hz, {plain(table.low_hz)}", "widen the band")
 
 
-def _pid(table: SimpleNamespace, given: AbstractSet[str]) -> Flaws:
+def _pid(table: SimpleNamespace, given: AbstractSet[str]) -> Iterator[Problem]:
     gains = (table.kp, table.ki, table.kd)
     if None not in gains and not any(gains):
-        yield "kp", Wrong("kp, ki and kd all 0", "at least one of kp, ki and kd other than 0", "add kp = ...")
+        yield Problem("kp", "kp, ki and kd all 0", "at least one of kp, ki and kd other than 0", "add kp = ...")
     if table.kd == 0 and "derivative_corner_hz" in given:
-        yield (
+        yield Problem(
             "derivative_corner_hz",
-            Wrong(
-                "a key that nothing uses while kd is 0", "only with kd", "add kd = ... or remove derivative_corner_hz"
-            ),
+            "a key that nothing uses while kd is 0",
+            "only with kd",
+            "add kd = ... or remove derivative_corner_hz",
         )
 
 
-def _sampling(table: SimpleNamespace, given: AbstractSet[str]) -> Flaws:
+def _sampling(table: SimpleNamespace, given: AbstractSet[str]) -> Iterator[Problem]:
     for option, methods in OPTION_METHODS.items():
         if table.method is not None and option in given and table.method not in methods:
-            yield (
+            yield Problem(
                 option,
-                Wrong(
-                    f'an option that the method "{table.method}" does not use',
-                    "only with " + " or ".join(f'"{method}"' for method in methods),
-                    f"remove {option}",
-                ),
+                f'an option that the method "{table.method}" does not use',
+                "only with " + " or ".join(f'"{method}"' for method in methods),
+                f"remove {option}",
             )
     rate, match = table.rate_hz, table.match_hz
     if rate is not None and match is not None and 2 * match >= rate:
-        yield (
+        yield Problem(
             "match_hz",
-            Wrong(
-                plain(match),
-                f"less than half the sampling rate, {plain(rate / 2)}",
-                f"match below {plain(rate / 2)} Hz, or sample faster than {plain(2 * match)} Hz",
-            ),
+            plain(match),
+            f"less than half the sampling rate, {plain(rate / 2)}",
+            f"match below {plain(rate / 2)} Hz, or sample faster than {plain(2 * match)} Hz",
         )
 
 
-def _signal(table: SimpleNamespace, given: AbstractSet[str]) -> Flaws:
-    if None not in (table.peak, table.full_scale) and table.peak > table.full_scale:
-        yield (
-            "peak",
-            Wrong(
-                plain(table.peak),
-                f"at most full_scale, {plain(table.full_scale)}",
-                "raise full_scale, as larger values can't be represented",
-            ),
-        )
-
-
-def _signals(table: SimpleNamespace, given: AbstractSet[str]) -> Flaws:
+def _signals(table: SimpleNamespace, given: AbstractSet[str]) -> Iterator[Problem]:
+    peak, full_scale = getattr(table.input, "peak", None), getattr(table.input, "full_scale", None)
+    if peak is not None and full_scale is not None and peak > full_scale:
+        remedy = "raise full_scale, as larger values can't be represented"
+        yield Problem("input.peak", plain(peak), f"at most full_scale, {plain(full_scale)}", remedy)
     if getattr(table.output, "peak", None) is not None:
-        yield "output.peak", Wrong("a peak", "a peak of the input only", "remove peak: the output's is computed")
+        yield Problem("output.peak", "a peak", "a peak of the input only", "remove peak: the output's is computed")
 
 
-def _arithmetic(table: SimpleNamespace, given: AbstractSet[str]) -> Flaws:
+def _arithmetic(table: SimpleNamespace, given: AbstractSet[str]) -> Iterator[Problem]:
     if table.kind == "float32":
-        yield "kind", _later(table.kind, 'kind = "fixed"')
+        yield _later("kind", table.kind, '"fixed"', 'write kind = "fixed"')
     if table.structure not in (None, "direct"):
-        yield "structure", _later(table.structure, 'structure = "direct"')
+        yield _later("structure", table.structure, '"direct"', 'write structure = "direct"')
     if table.carry:
-        yield "carry", _later(table.carry, "carry = false")
+        yield _later("carry", table.carry, "false", "write carry = false")
     if table.clamp is not None:
         low, high = table.clamp
         if low < high:
-            yield "clamp", _later([low, high], "remove clamp")
+            yield _later("clamp", [low, high], "a file without clamp", "remove clamp")
         else:
-            yield "clamp", Wrong(f"[{plain(low)}, {plain(high)}]", "[low, high] with low less than high")
+            yield Problem(
+                "clamp", f"[{plain(low)}, {plain(high)}]", "[low, high] with low less than high", "exchange the two"
+            )
     if table.state_bits is not None:
         if table.data_bits is not None and table.state_bits < table.data_bits:
-            yield (
-                "state_bits",
-                Wrong(str(table.state_bits), f"at least data_bits, {table.data_bits}", "widen the states"),
+            yield Problem(
+                "state_bits", str(table.state_bits), f"at least data_bits, {table.data_bits}", "widen the states"
             )
         else:
-            yield "state_bits", _later(table.state_bits, "remove state_bits")
+            yield _later("state_bits", table.state_bits, "a file without state_bits", "remove state_bits")
 
 
-def _later(value: object, remedy: str) -> Wrong:
-    return Wrong(f"{describe(value)}, not supported yet", f"in this version only {remedy}", remedy)
+def _later(key: str, value: object, accepted: str, remedy: str) -> Problem:
+    return Problem(key, f"{describe(value)}, not supported yet", f"in this version only {accepted}", remedy)
 
 
-def _budget(table: SimpleNamespace, given: AbstractSet[str]) -> Flaws:
+def _budget(table: SimpleNamespace, given: AbstractSet[str]) -> Iterator[Problem]:
     users = [key for key in ("magnitude_db", "phase_deg") if key in given]
     if users and "band_hz" not in given:
-        yield (
-            "band_hz",
-            Wrong("missing", f"the frequency up to which {' and '.join(users)} must hold", "add band_hz = ..."),
+        yield Problem(
+            "band_hz", "missing", f"the frequency up to which {' and '.join(users)} must hold", "add band_hz = ..."
         )
 
 
@@ -245,7 +218,6 @@ RULES: dict[type[Any], Rule] = {
     Bandstop: _band,
     Pid: _pid,
     Sampling: _sampling,
-    Signal: _signal,
     Signals: _signals,
     Arithmetic: _arithmetic,
     Budget: _budget,

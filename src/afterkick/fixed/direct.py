@@ -6,6 +6,7 @@ their own.  Where the numerator's is the finer one, its sum is brought to the de
 """
 
 import math
+from itertools import takewhile
 from typing import TYPE_CHECKING
 
 from attrs import evolve, frozen
@@ -39,7 +40,7 @@ from afterkick.fixed.quantise import (
 )
 from afterkick.fixed.ranges import Interval, largest_partial_sum, require_valid, sum_range
 from afterkick.fixed.scaling import FloatSection, norm_exponents
-from afterkick.numbers import is_exactly_zero, mid_float, working_bits
+from afterkick.numbers import mid_float, working_bits
 
 if TYPE_CHECKING:
     from afterkick.design.schema import Arithmetic, Signals
@@ -49,7 +50,6 @@ __all__ = ["LONGEST_DELAY", "direct_program"]
 
 LONGEST_DELAY = 256
 """Samples of whole delay that are built as a chain of words."""
-NARROWEST_SCALE = 1
 SCALING_BITS = 128
 
 
@@ -137,6 +137,11 @@ class _Plan:
     temporary_bits: int | None
     """The width of t, where the numerator has a sum of its own."""
 
+    def history(self, signal: str) -> int:
+        """How far back the sums read x or y, in samples."""
+        read = (term.word for step in self.sums for term in step.terms)
+        return max((int(word[1]) for word in read if word[0] == signal), default=0)
+
 
 def _unsupported(arithmetic: "Arithmetic") -> list[Problem]:
     later = "not supported yet"
@@ -217,15 +222,19 @@ def _plan(section: ExactSection, builder: _Builder) -> _Plan:
     if b_bits is None:
         where = f"section {section.number}"
         raise Refused(Problem(where, "the filter's gain is zero", "a filter that passes something", "check the model"))
+    narrowed = False
     while a_bits >= 1:
         a, b = section.denominator(a_bits), section.numerator(b_bits)
         problems = denominator_problems(section, a, a_bits) + numerator_problems(section, b, b_bits)
-        if problems:
+        if problems and not narrowed:
             raise Refused(problems)
+        if problems:
+            break
         plan = _attempt(b, b_bits, a, a_bits, builder)
         if isinstance(plan, _Plan):
-            _refuse_faint(section, plan)
+            _refuse_faint(section, plan, builder.data_bits)
             return plan
+        narrowed = True
         if plan == "numerator":
             b_bits -= 1
         else:
@@ -234,7 +243,7 @@ def _plan(section: ExactSection, builder: _Builder) -> _Plan:
     raise Refused(
         Problem(
             f"arithmetic, section {section.number}",
-            "the worst-case sum does not fit the accumulator at any binary point",
+            "the worst-case sum does not fit the accumulator at any binary point that keeps the coefficients",
             f"a sum of at most {builder.widest} bits",
             "accumulator_bits = 64, narrower data, or a larger output full scale",
         )
@@ -244,13 +253,13 @@ def _plan(section: ExactSection, builder: _Builder) -> _Plan:
 def _attempt(b: Triple, b_bits: int, a: Triple, a_bits: int, builder: _Builder) -> "_Plan | str":
     """The section's sums at these binary points, or which of them, "numerator" or "feedback", is too wide."""
     whole = Interval.of_word(builder.data_bits)
-    ranges = {name: whole for name in ("x0", "x1", "x2", "y1", "y2")}
-    feedback = tuple(Term(-a[i], f"y{i}") for i in (1, 2) if a[i])
+    ranges = dict.fromkeys(("x0", "x1", "x2", "y1", "y2"), whole)
+    feedback = tuple(Term(-a[i], f"y{i}", 0, f"a{i}") for i in (1, 2) if a[i])
     scale = a_bits if feedback else max(b_bits, 0)
     sums = []
     temporary_bits = None
     if b_bits > scale:
-        terms = tuple(Term(b[i], f"x{i}") for i in range(3) if b[i])
+        terms = tuple(Term(b[i], f"x{i}", 0, f"b{i}") for i in range(3) if b[i])
         width = builder.width(terms, ranges, b_bits - scale)
         if width is None:
             return "numerator"
@@ -260,7 +269,7 @@ def _attempt(b: Triple, b_bits: int, a: Triple, a_bits: int, builder: _Builder) 
         sums.append(partial)
         terms = (Term(1, "t"), *feedback)
     else:
-        terms = tuple(Term(b[i], f"x{i}", scale - b_bits) for i in range(3) if b[i]) + feedback
+        terms = tuple(Term(b[i], f"x{i}", scale - b_bits, f"b{i}") for i in range(3) if b[i]) + feedback
     width = builder.width(terms, ranges, scale)
     if width is None or scale > width - 2:
         return "feedback" if feedback else "numerator"
@@ -268,12 +277,12 @@ def _attempt(b: Triple, b_bits: int, a: Triple, a_bits: int, builder: _Builder) 
     return _Plan(b, b_bits, a, a_bits, tuple(sums), temporary_bits)
 
 
-def _refuse_faint(section: ExactSection, plan: _Plan) -> None:
+def _refuse_faint(section: ExactSection, plan: _Plan, data_bits: int) -> None:
     """A numerator so small that it hardly moves the sum, however long its integers are."""
     if plan.temporary_bits is None:
         return
     partial = plan.sums[0]
-    most = sum(abs(term.factor) for term in partial.terms) << (plan.data_bits - 1) >> partial.right_shift
+    most = sum(abs(term.factor) for term in partial.terms) << (data_bits - 1) >> partial.right_shift
     if most < ENOUGH_LAST_PLACES:
         raise Refused(
             Problem(
@@ -292,18 +301,69 @@ def _wire(
     builder: _Builder,
     delay_samples: int,
 ) -> tuple[ProgramSection, ...]:
-    """The words and steps of all sections, and how they hang together."""
+    """The words and steps of all sections, and how they hang together.
+
+    Signal 0 is the input, signal k the output of section k.  A signal's history is moved on once both sections that
+    read it are done: at the end of the section that filters it, and for the output at the end of the last one.
+    """
+    count = len(plans)
+    signals = ["x", *(f"v{k}" for k in range(1, count)), "y"]
+    roles = [Role.INPUT, *[Role.TEMPORARY] * (count - 1), Role.OUTPUT]
+    binary_points = [builder.data_bits - 1 - exponent for exponent in (0, *exponents)]
+    delays = [delay_samples] + [0] * count
+    depths = [0] * (count + 1)
+    for k, plan in enumerate(plans):
+        depths[k] = max(depths[k], delays[k] + plan.history("x"))
+        depths[k + 1] = plan.history("y")
+    groups = [
+        _signal_words(*signal, builder.data_bits) for signal in zip(signals, roles, binary_points, depths, strict=True)
+    ]
     wired = []
-    source, source_bits, delay = "x", builder.data_bits - 1, delay_samples
-    words = [Word("x", builder.data_bits, source_bits, Role.INPUT)]
-    for k, (section, plan, exponent) in enumerate(zip(sections, plans, exponents, strict=True), start=1):
-        last = k == len(plans)
-        dest, dest_bits = ("y", builder.data_bits - 1) if last else (f"v{k}", builder.data_bits - 1 - exponent)
-        in_depth = delay + max((int(t.word[1]) for s in plan.sums for t in s.terms if t.word[0] == "x"), default=0)
-        out_depth = max((int(t.word[1]) for s in plan.sums for t in s.terms if t.word[0] == "y"), default=0)
-        names = {f"x{i}": _delayed(source, delay + i) for i in range(3)}
-        names |= {f"y{i}": _delayed(dest, i) for i in range(3)} | {"t": f"t{k}"}
-        words += _history(source, in_depth, builder.data_bits, source_bits, words)
-        steps: list[Step] = [_renamed(step, names) for step in plan.sums]
-        steps += [Move(_delayed(source, i), _delayed(source, i - 1)) for i in range(in_depth, 0, -1)]
+    for k, (section, plan) in enumerate(zip(sections, plans, strict=True)):
+        names = {f"x{i}": _delayed(signals[k], delays[k] + i) for i in range(3)}
+        names |= {f"y{i}": _delayed(signals[k + 1], i) for i in range(3)} | {"t": f"t{k + 1}"}
+        words = groups[k + 1]
+        if plan.temporary_bits is not None:
+            scale = binary_points[k + 1] + plan.a_bits
+            words = (Word(f"t{k + 1}", plan.temporary_bits, scale, Role.TEMPORARY), *words)
+        if k == 0:
+            words = groups[0] + words
+        steps: tuple[Step, ...] = tuple(_renamed(step, names) for step in plan.sums) + _moves(signals[k], depths[k])
+        if k == count - 1:
+            steps += _moves(signals[count], depths[count])
+        with working_bits(SCALING_BITS):
+            coefficients = section.coefficients(plan.b, plan.b_bits, plan.a, plan.a_bits)
+        wired.append(
+            ProgramSection(
+                words=words,
+                steps=steps,
+                source=names["x0"],
+                dest=names["y0"],
+                b=plan.b,
+                b_fraction_bits=plan.b_bits,
+                a=plan.a,
+                a_fraction_bits=plan.a_bits,
+                coefficients=coefficients,
+                gain_log2=(0, *exponents)[k] - exponents[k],
+                marginal=section.marginal,
+            )
+        )
     return tuple(wired)
+
+
+def _delayed(signal: str, samples: int) -> str:
+    return f"{signal}_{samples}" if samples else signal
+
+
+def _signal_words(signal: str, role: Role, fraction_bits: int, depth: int, bits: int) -> tuple[Word, ...]:
+    past = (Word(_delayed(signal, i), bits, fraction_bits, Role.STATE) for i in range(1, depth + 1))
+    return (Word(signal, bits, fraction_bits, role), *past)
+
+
+def _moves(signal: str, depth: int) -> tuple[Move, ...]:
+    return tuple(Move(_delayed(signal, i), _delayed(signal, i - 1)) for i in range(depth, 0, -1))
+
+
+def _renamed(step: Sum, names: dict[str, str]) -> Sum:
+    terms = tuple(evolve(term, word=names[term.word]) for term in step.terms)
+    return evolve(step, dest=names[step.dest], terms=terms)

@@ -88,6 +88,8 @@ class Term:
     coefficient: int
     word: str
     shift: int = 0
+    label: str = ""
+    """Which of the section's coefficients this is, for readers."""
 
     @property
     def factor(self) -> int:

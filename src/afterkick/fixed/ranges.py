@@ -83,9 +83,9 @@ def analyse(program: Program) -> Analysis:
 
     A fault that hides what comes after it ends the walk.
     """
-    faults = _word_faults(program)
-    if faults:
-        return Analysis(faults, frozenset(word.name for word in program.words))
+    unsound = _word_faults(program)
+    if unsound:
+        return Analysis(unsound, frozenset(word.name for word in program.words))
     found: list[str] = []
     may_overflow: set[str] = set()
     known = {word.name: Interval.of_word(word.bits) for word in program.words}
@@ -170,7 +170,5 @@ def _sum_faults(step: Sum, ranges: dict[str, Interval]) -> list[str]:
         found.append(f"the sum of {step.dest} has no terms")
     magnitude = sum_range(step, ranges).magnitude
     if magnitude > (1 << (step.accumulator_bits - 1)) - 1:
-        found.append(
-            f"a partial sum of {step.dest} can reach {magnitude}, more than {step.accumulator_bits} bits hold"
-        )
+        found.append(f"a partial sum of {step.dest} can reach {magnitude}, more than {step.accumulator_bits} bits hold")
     return found

@@ -1,9 +1,9 @@
 """The classical analog filter families, exact or in balls at the working precision.
 
-A family is a low-pass prototype in the variable x = s / (2*pi*corner), and every filter is that prototype after a change
-of variable (low-pass x = f, high-pass 1/f, band-pass (f^2 + c^2) / (b f) with c^2 = low * high and b = high - low,
-band-stop its reciprocal; any filter handbook).  Roots of a family that are algebraic with a known polynomial are keyed
-by it, so that a Butterworth filter and the lag it contains share their pole; the others are keyed by their parameters.
+A family is a low-pass prototype in x = s / (2*pi*corner), and each filter is that prototype after a change of variable:
+low-pass x = f, high-pass 1/f, band-pass (f^2 + c^2) / (b f) with c^2 = low * high and b = high - low, band-stop the
+reciprocal of that (any filter handbook).  Roots that are algebraic with a known polynomial are keyed by it, so that a
+Butterworth filter and the lag it contains share their pole; the others are keyed by the parameters of the family.
 
 The corner x = j is, by common practice:
 
@@ -17,6 +17,7 @@ The gain at x = 0 is 1, except that the ripple of an even-order Chebyshev or ell
 
 from collections.abc import Callable, Hashable, Sequence
 from functools import lru_cache
+from math import factorial
 
 from attrs import frozen
 from flint import acb, arb, ctx, fmpq, fmpq_poly, fmpz_poly
@@ -24,7 +25,7 @@ from flint import acb, arb, ctx, fmpq, fmpq_poly, fmpz_poly
 from afterkick.errors import Problem, Refused
 from afterkick.model.factors import Factors, Gain
 from afterkick.model.roots import HERTZ, ZERO, Root, algebraic_roots, merged
-from afterkick.numbers import certified, decided_sign
+from afterkick.numbers import certified, decided_sign, mid_float
 
 __all__ = ["Prototype", "attenuation", "bandpass", "bandstop", "highpass", "lowpass", "prototype"]
 
@@ -37,7 +38,7 @@ class _Point:
     real: bool
     name: tuple[Hashable, ...]
     annihilator: tuple[fmpq, ...] = ()
-    """A rational polynomial it is a root of, lowest power first; x^2 - c for a real point.  Empty where none is known."""
+    """A rational polynomial it is a root of, lowest power first; x^2 - c for a real point.  Empty: none is known."""
 
     def reciprocal(self) -> "_Point":
         """1/x; the conjugate of it for a pair."""
@@ -86,43 +87,35 @@ def _power_excess(decibels: fmpq) -> arb:
     return (arb.const_log10() * arb(decibels) / 10).expm1()
 
 
-def _pair(value: fmpq) -> tuple[int, int]:
-    return int(value.numerator), int(value.denominator)
-
-
 # Prototypes
 
 
 def prototype(family: str, order: int, ripple_db: fmpq | None = None, stop_db: fmpq | None = None) -> Prototype:
     """The low-pass prototype of a family; what the family has no use for is ignored.
 
-    ``ripple_db`` is needed by ``chebyshev`` and ``elliptic``, ``stop_db`` by ``inverse-chebyshev`` and ``elliptic``.
+    ``chebyshev`` and ``elliptic`` need ``ripple_db`` > 0, ``inverse-chebyshev`` and ``elliptic`` ``stop_db`` > 0; of an
+    elliptic filter ``stop_db`` > ``ripple_db``.
 
-    :raises Refused: where an elliptic filter's ``stop_db`` is not above its ``ripple_db``.
+    :raises Refused: where one of them is missing.
     """
     if family == "butterworth" or (family == "bessel" and order == 1):
         return _butterworth(order)
     if family == "bessel":
         return _bessel(order)
     if family == "inverse-chebyshev":
-        assert stop_db is not None  # the reader's promise
+        stop = _needed("stop_db", stop_db)
         # At order 1 all three are the lag with that attenuation at the corner.
-        return _chebyshev(1, stop_db) if order == 1 else _inverse_chebyshev(order, stop_db)
-    assert ripple_db is not None
-    if family == "elliptic":
-        assert stop_db is not None
-        if stop_db <= ripple_db:
-            raise Refused(
-                Problem(
-                    "stop_db",
-                    f"{stop_db} dB with a ripple_db of {ripple_db} dB",
-                    "a stop_db above the ripple_db",
-                    "raise stop_db or lower ripple_db",
-                )
-            )
-        if order > 1:
-            return _elliptic(order, ripple_db, stop_db)
-    return _chebyshev(order, ripple_db)
+        return _chebyshev(1, stop) if order == 1 else _inverse_chebyshev(order, stop)
+    ripple = _needed("ripple_db", ripple_db)
+    if family == "chebyshev" or order == 1:
+        return _chebyshev(order, ripple)
+    return _elliptic(order, ripple, _needed("stop_db", stop_db))
+
+
+def _needed(key: str, decibels: fmpq | None) -> fmpq:
+    if decibels is None:
+        raise Refused(Problem(key, "missing", "a number of decibels above 0", f"add {key} = ..."))
+    return decibels
 
 
 def _on_ellipse(
@@ -179,18 +172,18 @@ def _chebyshev(order: int, ripple_db: fmpq) -> Prototype:
     square: tuple[fmpq, ...] = ()
     if order == 1 and (ripple_db / 10).denominator == 1:
         square = (fmpq(-1), fmpq(0), fmpq(10) ** int((ripple_db / 10).numerator) - 1)
-    poles = _on_ellipse(order, half_axes, ("chebyshev", order, _pair(ripple_db)), square)
+    poles = _on_ellipse(order, half_axes, ("chebyshev", order, ripple_db), square)
     return _normalized((), poles, Gain() if order % 2 else attenuation(ripple_db), Gain())
 
 
 def _inverse_chebyshev(order: int, stop_db: fmpq) -> Prototype:
-    """1 - (a Chebyshev filter at 1/w): the reciprocals of its poles, and zeros where T_n(1/w) is zero."""
+    """1 less the power of a Chebyshev filter at 1/w: the reciprocals of its poles, and zeros where T_n(1/w) is zero."""
 
     def half_axes() -> tuple[arb, arb]:
         small = _power_excess(stop_db).sqrt().asinh() / order
         return small.sinh_cosh()
 
-    name: tuple[Hashable, ...] = ("inverse-chebyshev", order, _pair(stop_db))
+    name: tuple[Hashable, ...] = ("inverse-chebyshev", order, stop_db)
     poles = tuple(point.reciprocal() for point in _on_ellipse(order, half_axes, name))
     chebyshev = fmpz_poly.chebyshev_t(order)
     # T_n has powers of one parity; x^n T_n(j/x) is, but for a power of j, the polynomial with these coefficients.
@@ -207,18 +200,22 @@ def _inverse_chebyshev(order: int, stop_db: fmpq) -> Prototype:
 
 @lru_cache(maxsize=64)
 def _bessel_poles(order: int, bits: int) -> tuple[acb, ...]:
-    """The poles with a positive or zero imaginary part, that part falling, for half the power at 1."""
-    half = [1]
-    for k in range(order, 0, -1):  # the coefficient of x^(k-1) from the one of x^k
-        half.append(half[-1] * k * (2 * order - k + 1) // (2 * (order - k + 1)))
-    theta = fmpz_poly(half[::-1])
-    # With y = w^2: |theta(jw)|^2 = even(-y)^2 + y odd(-y)^2, which rises with y.
-    even = fmpz_poly([(-1) ** i * c for i, c in enumerate(half[::-1][0::2])])
-    odd = fmpz_poly([(-1) ** i * c for i, c in enumerate(half[::-1][1::2])])
-    power = even * even + fmpz_poly([0, 1]) * odd * odd - 2 * theta[0] ** 2
-    (corner,) = (root.real.sqrt() for root, _ in power.complex_roots() if root.imag.is_zero() and root.real > 0)
-    upper = [root / corner for root, _ in theta.complex_roots() if root.imag.is_zero() or root.imag > 0]
-    return tuple(sorted(upper, key=lambda root: -float(root.imag.mid())))
+    """The poles with imaginary part >= 0, that part falling; ``bits`` is the present working precision."""
+    theta = [
+        factorial(2 * order - k) // (2 ** (order - k) * factorial(k) * factorial(order - k)) for k in range(order + 1)
+    ]
+    # |theta(jw)|^2 rises with y = w^2: it is even(-y)^2 + y odd(-y)^2, and half the power is where it is 2 theta(0)^2.
+    even, odd = (fmpz_poly([(-1) ** i * c for i, c in enumerate(theta[first::2])]) for first in (0, 1))
+    half_power = even * even + fmpz_poly([0, 1]) * odd * odd - 2 * theta[0] ** 2
+    (corner,) = (root.real.sqrt() for root in _complex_roots(half_power) if root.imag.is_zero() and root.real > 0)
+    upper = [root / corner for root in _complex_roots(fmpz_poly(theta)) if root.imag.is_zero() or root.imag > 0]
+    return tuple(sorted(upper, key=lambda root: -mid_float(root.imag)))
+
+
+def _complex_roots(polynomial: fmpz_poly) -> list[acb]:
+    """Disjoint balls round the roots of a square-free polynomial; real ones have an imaginary part of exactly zero."""
+    # python-flint's stub forgets the multiplicity that comes with each root.
+    return [root for root, _ in polynomial.complex_roots()]  # type: ignore[misc, has-type]
 
 
 def _bessel(order: int) -> Prototype:
@@ -233,22 +230,22 @@ def _bessel(order: int) -> Prototype:
 
 @lru_cache(maxsize=64)
 def _elliptic_points(order: int, ripple_db: fmpq, stop_db: fmpq, bits: int) -> tuple[tuple[acb, ...], tuple[acb, ...]]:
-    """Zeros and poles with a positive or zero imaginary part, that part falling for the poles.
+    """Zeros and poles with imaginary part >= 0; ``bits`` is the present working precision.
 
     The degree equation says that the order divides the ratio of periods, which needs no nome and no modulus; cd is
     a quotient of theta functions of that ratio (Abramowitz and Stegun, chapters 16 and 17; R_F is Carlson's).
     """
     ripple, stop = _power_excess(ripple_db), _power_excess(stop_db)
     modulus = ripple / stop  # squared, of the characteristic function
-    complement = (_power_excess(ripple_db) + 1) * _power_excess(stop_db - ripple_db) / stop  # 1 - modulus
+    complement = (ripple + 1) * _power_excess(stop_db - ripple_db) / stop  # 1 - modulus
     mean, mean_complement = arb(1).agm(modulus.sqrt()), arb(1).agm(complement.sqrt())
     ratio = acb(0, mean_complement / (mean * order))
     depth = acb.elliptic_rf(ripple, ripple + modulus, 1 + ripple).real * 2 * mean_complement / (arb.pi() * order)
-    _, theta_2, theta_3, _ = acb(0).modular_theta(ratio)
+    _, theta_2, theta_3, _ = acb.modular_theta(acb(0), ratio)
     factor = theta_3.real / theta_2.real
 
     def quotient(turn: fmpq, height: arb) -> acb:
-        _, upper, lower, _ = acb(arb(turn) / 2, -height / 2).modular_theta(ratio)
+        _, upper, lower, _ = acb.modular_theta(acb(arb(turn) / 2, -height / 2), ratio)
         return upper / lower
 
     turns = [fmpq(2 * index - 1, order) for index in range(1, order // 2 + 1)]
@@ -261,7 +258,7 @@ def _elliptic_points(order: int, ripple_db: fmpq, stop_db: fmpq, bits: int) -> t
 
 def _elliptic(order: int, ripple_db: fmpq, stop_db: fmpq) -> Prototype:
     """1 / (1 + e^2 R_n(w)^2) with the elliptic rational function R_n (Cauer), e^2 = 10^(ripple_db/10) - 1."""
-    name: tuple[Hashable, ...] = ("elliptic", order, _pair(ripple_db), _pair(stop_db))
+    name: tuple[Hashable, ...] = ("elliptic", order, ripple_db, stop_db)
 
     def zero(index: int) -> _Point:
         return _Point(
@@ -335,7 +332,7 @@ def _moved(points: Sequence[_Point], corner_hz: fmpq, kind: str) -> dict[Root, i
     def root(point: _Point) -> Root:
         degree = len(point.annihilator) - 1
         annihilator = fmpq_poly([c * corner_hz ** (degree - k) for k, c in enumerate(point.annihilator)])
-        key = (kind, _pair(corner_hz), *point.name)
+        key = (kind, corner_hz, *point.name)
         return _root(lambda: point.evaluate() * arb(corner_hz), point.real, key, annihilator)
 
     return {root(point): 1 for point in points}
@@ -346,7 +343,7 @@ def _split(points: Sequence[_Point], low_hz: fmpq, high_hz: fmpq, kind: str) -> 
     found: dict[Root, int] = {}
     for point in points:
         annihilator = _banded(point.annihilator, low_hz, high_hz)
-        key = (kind, _pair(low_hz), _pair(high_hz), *point.name)
+        key = (kind, low_hz, high_hz, *point.name)
         sign = _discriminant_sign(point, low_hz, high_hz) if point.real else -1
         inner = _inner(point, low_hz, high_hz, sign)
         if sign == 0 or (point.real and sign < 0):
@@ -411,7 +408,7 @@ def _root(evaluate: Callable[[], acb], real: bool, key: tuple[Hashable, ...], an
     def radians() -> acb:
         return evaluate() * (2 * arb.pi())
 
-    if annihilator == 0:
+    if annihilator.is_zero():
         return Root(("family", *key), real, radians)
     candidates = _candidates(tuple(annihilator.coeffs()))
 

@@ -41,7 +41,7 @@ def model_of(design: Design) -> Model:
 
 
 def _ratio(numerator: fmpq_poly, denominator: fmpq_poly, where: str) -> Factors:
-    if numerator == 0:
+    if numerator.is_zero():
         raise Refused(
             Problem(where, "a transfer function that is zero", "at least one coefficient that is not zero", "")
         )
@@ -56,10 +56,8 @@ def _roots(form: RootsForm) -> Factors:
     for listed, power in ((form.zeros, 1), (form.poles, -1)):
         for re, im in listed:
             size = re * re + im * im if im != 0 else -re
-            if size == 0 or dc_gain is None:
-                dc_gain = None
-            else:
-                dc_gain = dc_gain * size if power == 1 else dc_gain / size
+            if dc_gain is not None:
+                dc_gain = None if size == 0 else dc_gain * size**power
     return Factors(zeros, poles, Gain(form.gain), dc_gain)
 
 
@@ -80,4 +78,3 @@ def _matrices(form: MatricesForm) -> Factors:
     denominator = a.charpoly()
     numerator = (a - b * c).charpoly() - denominator + form.d * denominator
     return _ratio(numerator, denominator, "model")
-

@@ -8,7 +8,18 @@ from flint import acb, arb, fmpq, fmpq_poly
 from afterkick.errors import Problem, Refused
 from afterkick.model.factors import Factors, Gain
 from afterkick.model.partial_fractions import Mode, expand, product_taylor
-from afterkick.model.roots import RADIANS, ZERO, Root, Roots, algebraic_roots, cancel, count, merged, refuse_undecided, values
+from afterkick.model.roots import (
+    RADIANS,
+    ZERO,
+    Root,
+    Roots,
+    algebraic_roots,
+    cancel,
+    count,
+    merged,
+    refuse_undecided,
+    values,
+)
 from afterkick.numbers import decided_sign, is_exactly_zero
 
 __all__ = ["MAXIMUM_ORDER", "FreeResponse", "Model", "build", "real_part_sign"]
@@ -184,8 +195,8 @@ def build(
 
     ``before`` (y, y', ... at 0-) needs the ``denominator`` a_n s^n + ... + a_0 of the differential equation.
 
-    :raises Refused: order outside 1..16, an unstable or initial-condition-excited cancellation, roots that can't be told
-        apart.
+    :raises Refused: an order outside 1..16, an unstable or initial-condition-excited cancellation, roots that can't be
+        told apart.
     """
     refuse_undecided({**factors.zeros, **factors.poles})
     zeros, poles, common = cancel(factors.zeros, factors.poles)

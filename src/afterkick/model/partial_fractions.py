@@ -48,9 +48,7 @@ def product_taylor(gain: arb, zeros: Sequence[tuple[acb, int]]) -> Callable[[acb
     return taylor
 
 
-def expand(
-    numerator: Callable[[acb, int], list[acb]], poles: Sequence[tuple[acb, bool, int]]
-) -> tuple[Mode, ...]:
+def expand(numerator: Callable[[acb, int], list[acb]], poles: Sequence[tuple[acb, bool, int]]) -> tuple[Mode, ...]:
     """The modes of numerator(s) / prod(s - pole)^times; a polynomial part, if any, is left out.
 
     ``numerator(point, terms)`` gives that many Taylor coefficients about a point; ``poles`` lists (value with imaginary

@@ -159,15 +159,16 @@ def _every_root(coefficients: tuple[int, ...], bits: int) -> list[acb]:
     if len(coefficients) == 3:
         upper = _isolated(coefficients, bits)
         return [*upper, upper[0].conjugate()] if len(upper) == 1 else list(upper)
-    return [root for root, _ in fmpz_poly(list(coefficients)).complex_roots()]
+    pairs: list[tuple[acb, int]] = fmpz_poly(list(coefficients)).complex_roots()  # type: ignore[assignment]  # stub is wrong
+    return [root for root, _ in pairs]
 
 
 def _square_roots(square: acb) -> list[acb]:
     """The square roots with imaginary part >= 0.  Of an even irreducible polynomial these are its roots: purely
     imaginary ones come out with a real part that is exactly zero, which no general root finder can promise."""
     if square.imag.is_zero():
-        root = abs(square.real).sqrt()
-        return [acb(0, root)] if square.real < 0 else [acb(-root), acb(root)]
+        size = abs(square.real).sqrt()
+        return [acb(0, size)] if square.real < 0 else [acb(-size), acb(size)]
     root = square.sqrt()
     return [root if square.imag > 0 else -root]
 
@@ -212,7 +213,7 @@ def _first_isolation(coefficients: tuple[int, ...]) -> tuple[acb, ...]:
 
 
 def identified(evaluate: Callable[[], acb], annihilator: fmpq_poly, unit: str) -> Root:
-    """The algebraic root that ``evaluate`` (in ``unit``, imaginary part >= 0) gives, by a polynomial it is a root of."""
+    """The algebraic root that ``evaluate`` (in ``unit``, imaginary part >= 0) gives; ``annihilator`` vanishes there."""
     candidates = list(algebraic_roots(annihilator, unit))
 
     def near() -> list[Root]:

@@ -51,7 +51,8 @@ def backward_difference_transfer(model: Model, period: fmpq) -> PulseTransfer:
         return (_norm(lead, root) / arb(period) ** root.degree, ZRoot(1 / lead, root.real, name=root.key))
 
     transfer = _assembled(model, mapped, None)
-    return evolve(transfer, leading=0, poles=transfer.poles + (ZRoot(acb(0), True, name=0),) * max(0, -model.relative_degree))
+    poles_at_zero = (ZRoot(acb(0), True, name=0),) * max(0, -model.relative_degree)
+    return evolve(transfer, leading=0, poles=transfer.poles + poles_at_zero)
 
 
 def matched_transfer(model: Model, period: fmpq, match_hz: fmpq | None, zeros_at_infinity: str) -> PulseTransfer:

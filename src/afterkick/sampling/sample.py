@@ -1,5 +1,6 @@
 """Model + [sampling] -> Sampled, or the reasons why not."""
 
+from collections.abc import Callable
 from fractions import Fraction
 
 from flint import acb, arb, fmpq
@@ -9,8 +10,14 @@ from afterkick.errors import Problem, Refused
 from afterkick.model.model import Model
 from afterkick.model.roots import Root
 from afterkick.numbers import certified, fraction, mid_float
-from afterkick.sampling.holds import INVARIANT_METHODS
-from afterkick.sampling.maps import bilinear_constant
+from afterkick.sampling.holds import INVARIANT_METHODS, invariant_transfer
+from afterkick.sampling.maps import (
+    backward_difference_transfer,
+    bilinear_constant,
+    bilinear_transfer,
+    matched_transfer,
+)
+from afterkick.sampling.pulse_transfer import PulseTransfer
 from afterkick.sampling.sampled import Sampled
 
 __all__ = ["aliased_hz", "sample"]
@@ -29,7 +36,21 @@ def sample(model: Model, options: Sampling) -> Sampled:
         problems = [*_mapped_to_infinity(model, options), *_unmatchable(model, options)]
     if problems:
         raise Refused(problems)
-    return Sampled(model, options, whole, rest, tuple(_fast_modes(model, options)))
+    return Sampled(model, options, whole, rest, _method(model, options, rest), tuple(_fast_modes(model, options)))
+
+
+def _method(model: Model, options: Sampling, rest: fmpq) -> Callable[[], PulseTransfer | None]:
+    period = 1 / options.rate_hz
+    match options.method:
+        case "bilinear":
+            return lambda: bilinear_transfer(model, period, options.match_hz)
+        case "backward-difference":
+            return lambda: backward_difference_transfer(model, period)
+        case "matched":
+            return lambda: matched_transfer(model, period, options.match_hz, options.zeros_at_infinity or "half-rate")
+        case _:
+            first_sample = options.first_sample or "half"
+            return lambda: invariant_transfer(model, options.method, period, rest, first_sample)
 
 
 def _improper(model: Model, options: Sampling) -> list[Problem]:
@@ -52,9 +73,7 @@ def _fractional(model: Model, options: Sampling, rest: fmpq) -> list[Problem]:
     whole = max(1, round(fraction(model.dead_time_s * options.rate_hz)))
     remedy = f"zero-order-hold, or rate_hz = {_short(whole / model.dead_time_s)}, where it is {whole} whole samples"
     if options.method not in INVARIANT_METHODS:
-        return [
-            Problem("sampling.method", f"a dead time of {samples} with {options.method}", "whole samples", remedy)
-        ]
+        return [Problem("sampling.method", f"a dead time of {samples} with {options.method}", "whole samples", remedy)]
     if options.method == "impulse-invariant" and model.relative_degree == 0:
         found = f"a dead time of {samples} with impulse-invariant on a model with feedthrough"
         return [Problem("sampling.method", found, "whole samples: the Dirac part must fall on a sample", remedy)]

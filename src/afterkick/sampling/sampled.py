@@ -4,16 +4,14 @@ from collections import Counter
 from collections.abc import Callable
 from functools import cached_property, lru_cache
 
-from attrs import frozen
+from attrs import field, frozen
 from flint import acb, arb, fmpq
 
 from afterkick.design.schema import Sampling
 from afterkick.model.model import Model
 from afterkick.model.partial_fractions import Mode, expand, product_taylor
 from afterkick.numbers import accurate, certified, is_exactly_zero
-from afterkick.sampling.holds import INVARIANT_METHODS, invariant_transfer
-from afterkick.sampling.maps import backward_difference_transfer, bilinear_transfer, matched_transfer
-from afterkick.sampling.pulse_transfer import PulseTransfer, expanded
+from afterkick.sampling.pulse_transfer import PulseTransfer, ZRoot, expanded
 from afterkick.sampling.sections import Section, paired
 
 __all__ = ["ParallelSection", "Sampled", "Section"]
@@ -38,6 +36,8 @@ class Sampled:
     """Whole samples of dead time."""
     fraction_s: fmpq
     """What the whole samples leave of the dead time."""
+    attempt: Callable[[], PulseTransfer | None] = field(repr=False)
+    """The factored pulse transfer function at the present working precision; None: more bits needed."""
     warnings: tuple[str, ...] = ()
 
     @property
@@ -54,11 +54,6 @@ class Sampled:
     def period_s(self) -> fmpq:
         """T."""
         return 1 / self.options.rate_hz
-
-    @property
-    def first_sample(self) -> str:
-        """What impulse invariance makes of a jump at t = 0: "half" or "full" of it."""
-        return self.options.first_sample or "half"
 
     def transfer(self, bits: int = 128) -> PulseTransfer:
         """The factored pulse transfer function, with balls of at least ``bits`` working bits."""
@@ -89,24 +84,33 @@ class Sampled:
         )
         return not self.marginal and all(v < 0 for v in found)
 
-    def pulse_modes(self) -> tuple[Mode, ...]:
+    def pulse_modes(self, integrations: int = 0) -> tuple[Mode, ...]:
         """c_j of g[n] = sum over j of c_j C(n-1, j) p^(n-1-j), n > number of poles at z = 0, at the working precision.
 
-        The whole-sample delay is not included.
+        With ``integrations`` = 1 the step response instead.  The whole-sample delay is not included.
         """
         transfer = _compute(self)
-        zeros = [(root.value, 1) for root in transfer.zeros]
-        zeros += [(root.value.conjugate(), 1) for root in transfer.zeros if not root.real]
+        zeros = list(transfer.zeros)
         times = Counter(pole.name for pole in transfer.poles if not is_exactly_zero(pole.value))
         named = {pole.name: pole for pole in transfer.poles if pole.name in times}
+        for _ in range(integrations):
+            one = next((zero for zero in zeros if zero.at_one()), None)
+            if one is None:
+                name = next((pole.name for pole in named.values() if pole.at_one()), "step")
+                named.setdefault(name, ZRoot(acb(1), True, name=name))
+                times[name] += 1
+            else:
+                zeros.remove(one)
+        factors = [(root.value, 1) for root in zeros]
+        factors += [(root.value.conjugate(), 1) for root in zeros if not root.real]
         poles = [(pole.value, pole.real, times[name]) for name, pole in named.items()]
         # in powers of z, what the numerator lacks in degree is zeros at z = 0; more zeros than poles are poles there
-        surplus = sum(pole.degree * times[name] for name, pole in named.items()) - len(zeros) - transfer.leading
+        surplus = sum(pole.degree * times[name] for name, pole in named.items()) - len(factors) - transfer.leading
         if surplus > 0:
-            zeros.append((acb(0), surplus))
+            factors.append((acb(0), surplus))
         elif surplus < 0:
             poles.append((acb(0), True, -surplus))
-        return expand(product_taylor(transfer.gain, zeros), poles)[: len(named)]
+        return expand(product_taylor(transfer.gain, factors), poles)[: len(named)]
 
     def first_samples(self, number: int) -> list[arb]:
         """g[0] .. g[number-1] by series division, without the whole-sample delay."""
@@ -148,28 +152,14 @@ def _parallel_section(mode: Mode) -> ParallelSection:
     if mode.real:
         return ParallelSection((residue.real, arb(0)), (arb(1), -pole.real, arb(0)))
     square = pole.real * pole.real + pole.imag * pole.imag
-    return ParallelSection(
-        (2 * residue.real, -2 * (residue * pole.conjugate()).real), (arb(1), -2 * pole.real, square)
-    )
+    return ParallelSection((2 * residue.real, -2 * (residue * pole.conjugate()).real), (arb(1), -2 * pole.real, square))
 
 
 def _compute(sampled: Sampled) -> PulseTransfer:
     """The transfer at the present working precision or the lowest one above it that isolates the zeros."""
-    found = certified(lambda: _attempt(sampled), lambda transfer: transfer is not None, "the zeros of the sampled filter")
+    found = certified(sampled.attempt, lambda found: found is not None, "the zeros of the sampled filter")
     assert found is not None
     return found
-
-
-def _attempt(sampled: Sampled) -> PulseTransfer | None:
-    model, options, period = sampled.model, sampled.options, sampled.period_s
-    if options.method in INVARIANT_METHODS:
-        return invariant_transfer(model, options.method, period, sampled.fraction_s, sampled.first_sample)
-    methods: dict[str, Callable[[], PulseTransfer]] = {
-        "bilinear": lambda: bilinear_transfer(model, period, options.match_hz),
-        "backward-difference": lambda: backward_difference_transfer(model, period),
-        "matched": lambda: matched_transfer(model, period, options.match_hz, options.zeros_at_infinity or "half-rate"),
-    }
-    return methods[options.method]()
 
 
 @lru_cache(maxsize=64)
@@ -186,7 +176,7 @@ def _transfer(sampled: Sampled, bits: int) -> PulseTransfer:
 @lru_cache(maxsize=256)
 def _sections(sampled: Sampled, bits: int) -> tuple[Section, ...]:
     def compute() -> tuple[Section, ...] | None:
-        transfer = _attempt(sampled)
+        transfer = sampled.attempt()
         return None if transfer is None else paired(transfer)
 
     def enough(sections: tuple[Section, ...] | None) -> bool:

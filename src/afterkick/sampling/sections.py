@@ -57,8 +57,8 @@ def paired(transfer: PulseTransfer) -> tuple[Section, ...] | None:
         room = min(late, _degree(group) - _degree(taken))
         late -= room
         sections.append(_section(group, taken, room))
-    assert late == 0 and not zeros, "a numerator of higher order than its denominator"
-    scales = [_unit_scale(section, *roots) for section, roots in zip(sections, assigned, strict=True)]
+    assert late == 0 == len(zeros), "a numerator of higher order than its denominator"
+    scales = [_unit_scale(section) for section in sections]
     if any(scale.contains(0) or not scale.is_finite() for scale in scales):
         return None
     scales[-1] = transfer.gain
@@ -120,10 +120,15 @@ def _three(values: Sequence[arb]) -> tuple[arb, arb, arb]:
     return first, second, third
 
 
-def _unit_scale(section: Section, poles: Sequence[ZRoot], zeros: Sequence[ZRoot]) -> arb:
+def _unit_scale(section: Section) -> arb:
     """What brings the gain at z = 1, or at z = -1 where a zero or pole is at 1, to one."""
-    if not any(root.at_one() for root in (*poles, *zeros)):
-        return section.a_at_one / section.b_at_one
     b, a = section.b, section.a
-    top, bottom = b[0] - b[1] + b[2], a[0] - a[1] + a[2]
-    return arb(1) if top.contains(0) or bottom.contains(0) else bottom / top
+    for top, bottom in ((section.b_at_one, section.a_at_one), (b[0] - b[1] + b[2], a[0] - a[1] + a[2])):
+        if not (_nothing_left(top, b) or _nothing_left(bottom, a)):
+            return bottom / top
+    return arb(1)
+
+
+def _nothing_left(total: arb, group: Sequence[arb]) -> bool:
+    """Whether a sum is zero as far as a choice of scale is concerned; the product of the sections stays exact."""
+    return bool(abs(total) < sum((abs(value) for value in group), arb(0)) * arb(2) ** -60)

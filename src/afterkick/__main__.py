@@ -1,0 +1,5 @@
+"""``python -m afterkick``."""
+
+from afterkick.cli import main
+
+main(prog_name="afterkick")

@@ -1,0 +1,53 @@
+"""``afterkick kick DESIGN``."""
+
+from decimal import Decimal, InvalidOperation
+from pathlib import Path
+
+import click
+from flint import fmpq
+
+from afterkick.cli.common import HOLDS, json_option, load, print_json, reported
+from afterkick.errors import Problem, Refused
+from afterkick.fixed.direct import direct_program
+from afterkick.model.forms import model_of
+from afterkick.numbers import rational
+from afterkick.report.data import kick_data
+from afterkick.report.response import kick
+from afterkick.report.text import kick_text
+from afterkick.sampling import sample
+
+__all__ = ["command"]
+
+
+@click.command("kick", help="Print the impulse response of DESIGN: analytic, sampled, integer.")
+@click.argument("design", type=click.Path(path_type=Path))
+@click.option("--samples", type=click.IntRange(1, 100_000), default=32, show_default=True, help="Rows to print.")
+@click.option("--amplitude", help="Kick of the integer filter, in input units; default: the promised peak.")
+@json_option
+def command(design: Path, samples: int, amplitude: str | None, as_json: bool) -> None:
+    """The columns share one unit: output units per input unit and second."""
+    with reported(str(design)) as codes:
+        found = load(design)
+        model = model_of(found)
+        sampled = sample(model, found.sampling)
+        program = direct_program(sampled, found.arithmetic, found.signals, found.design.name)
+        size = found.signals.input.peak_or_full_scale if amplitude is None else _amplitude(amplitude)
+        rows = kick(model, sampled, program, samples, size)
+        if as_json:
+            print_json(kick_data(found, rows))
+        else:
+            click.echo(kick_text(found, rows))
+        codes.append(HOLDS)
+    raise SystemExit(max(codes))
+
+
+def _amplitude(text: str) -> fmpq:
+    try:
+        value = Decimal(text)
+        if value.is_finite() and abs(value.adjusted()) < 300 and value > 0:
+            return rational(value)
+    except InvalidOperation:
+        pass
+    raise Refused(Problem("--amplitude", text[:40], "a positive decimal number, in input units"))
+
+

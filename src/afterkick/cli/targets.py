@@ -1,0 +1,27 @@
+"""``afterkick targets``."""
+
+from pathlib import Path
+
+import click
+from attrs import asdict
+
+from afterkick.cli.common import HOLDS, json_option, print_json, reported
+from afterkick.targets import load_targets
+
+__all__ = ["command"]
+
+
+@click.command("targets", help="List the target profiles.")
+@click.option("--targets", "folder", type=click.Path(path_type=Path), help="A folder of your own profiles as well.")
+@json_option
+def command(folder: Path | None, as_json: bool) -> None:
+    """One line a profile."""
+    with reported("targets") as codes:
+        profiles = load_targets(folder)
+        codes.append(HOLDS)
+        if as_json:
+            print_json({"targets": [asdict(profile) for profile in profiles]})
+        else:
+            for profile in profiles:
+                click.echo(profile)
+    raise SystemExit(max(codes))

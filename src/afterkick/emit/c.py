@@ -1,0 +1,60 @@
+"""Program -> C files as text.  The templates place what the views decide."""
+
+from pathlib import Path
+
+from afterkick.emit.selftest import selftest_view
+from afterkick.emit.view import program_view
+from afterkick.errors import Problem, Refused
+from afterkick.fixed.program import Program
+from afterkick.resources import resource_folder
+
+__all__ = ["emit_c"]
+
+LANGUAGE = "c"
+FILES = {
+    ".h": "header.h.j2",
+    ".c": "source.c.j2",
+    "_selftest.h": "selftest.h.j2",
+    "_selftest.c": "selftest.c.j2",
+}
+
+
+def emit_c(program: Program, *, notes: tuple[str, ...] = (), templates: Path | None = None) -> dict[str, str]:
+    """NAME.h, NAME.c, NAME_selftest.h and NAME_selftest.c: the same program gives the same bytes.
+
+    ``notes`` are lines for the header, for example measured errors.  Templates in ``templates``/c go before those that
+    come with the package.
+
+    :raises Refused: for a program whose sums could overflow, a name that can't be a prefix of C symbols, or a template
+        that can't be used.
+    """
+    from jinja2 import ChoiceLoader, Environment, FileSystemLoader, StrictUndefined, TemplateError
+
+    folders = [] if templates is None else [_own_folder(templates)]
+    folders.append(resource_folder("templates") / LANGUAGE)
+    environment = Environment(
+        loader=ChoiceLoader([FileSystemLoader(folder) for folder in folders]),
+        undefined=StrictUndefined,
+        autoescape=False,
+        trim_blocks=True,
+        lstrip_blocks=True,
+        keep_trailing_newline=True,
+    )
+    view = program_view(program, notes)
+    test = selftest_view(program, view.symbols)
+    files = {}
+    for ending, template in FILES.items():
+        try:
+            files[view.symbols.file(ending)] = environment.get_template(template).render(view=view, test=test)
+        except TemplateError as error:
+            where = f"template {LANGUAGE}/{template}"
+            raise Refused(Problem(where, str(error), "a template that renders", "correct the template")) from error
+    return files
+
+
+def _own_folder(templates: Path) -> Path:
+    folder = templates / LANGUAGE
+    if not folder.is_dir():
+        found = f"{templates} holds no folder {LANGUAGE}"
+        raise Refused(Problem("templates", found, f"a folder with templates in {LANGUAGE}/", f"make {folder}"))
+    return folder

@@ -1,0 +1,213 @@
+"""What the C templates place: every type, literal, symbol and line of code, decided here."""
+
+from attrs import frozen
+
+from afterkick.emit.banner import header_banner, source_banner
+from afterkick.emit.literals import container_bits, integer, signed
+from afterkick.emit.symbols import Symbols
+from afterkick.fixed.program import Coefficient, Overflow, Program, ProgramSection, Role, Rounding, Sum, Term, Word
+from afterkick.fixed.ranges import require_valid
+
+__all__ = ["BlockView", "CheckView", "HelperView", "LineView", "MemberView", "ProgramView", "container", "program_view"]
+
+ROUNDING_HELPER = {Rounding.NEAREST: "nearest", Rounding.FLOOR: "shift", Rounding.EVEN: "even"}
+HELPER_ORDER = ("shift", "nearest", "even", "clamp", "wrap")
+"""Each one may call those before it."""
+
+
+@frozen
+class MemberView:
+    """A state word in the struct."""
+
+    type: str
+    name: str
+    comment: str
+
+
+@frozen
+class LineView:
+    """One line of code with the comment behind it."""
+
+    code: str
+    comment: str = ""
+
+
+@frozen
+class BlockView:
+    """The statements of one section."""
+
+    title: str
+    lines: tuple[LineView, ...]
+
+
+@frozen
+class HelperView:
+    """A static inline function of one width."""
+
+    kind: str
+    bits: int
+    symbol: str
+    shift_symbol: str
+    """The right shift of the same width."""
+
+
+@frozen
+class CheckView:
+    """A type that can't be declared where the condition is false."""
+
+    symbol: str
+    condition: str
+
+
+@frozen
+class ProgramView:
+    """The header and the source of a program."""
+
+    symbols: Symbols
+    header_banner: tuple[str, ...]
+    source_banner: tuple[str, ...]
+    data_type: str
+    data_bits: int
+    input: str
+    output: str
+    lowest: int
+    highest: int
+    delay_samples: int
+    members: tuple[MemberView, ...]
+    helpers: tuple[HelperView, ...]
+    checks: tuple[CheckView, ...]
+    blocks: tuple[BlockView, ...]
+
+
+def container(bits: int) -> str:
+    """The C type that holds a word of ``bits`` bits."""
+    return f"int{container_bits(bits)}_t"
+
+
+def program_view(program: Program, notes: tuple[str, ...]) -> ProgramView:
+    """Every decision that printing a Program as C needs.
+
+    :raises Refused: for a program whose sums could overflow, or a name that can't be a prefix.
+    """
+    symbols = Symbols.of(program.name)
+    source = program.word(program.input)
+    printer = _Printer(program, symbols, require_valid(program).may_overflow)
+    blocks = tuple(printer.block(number) for number in range(1, len(program.sections) + 1))
+    width = container_bits(source.bits)
+    return ProgramView(
+        symbols=symbols,
+        header_banner=header_banner(program, notes),
+        source_banner=source_banner(program),
+        data_type=container(source.bits),
+        data_bits=source.bits,
+        input=symbols.local(program.input),
+        output=symbols.local(program.output),
+        lowest=source.lowest,
+        highest=source.highest,
+        delay_samples=program.delay_samples,
+        members=tuple(_member(word, symbols) for word in program.words if word.role is Role.STATE),
+        helpers=printer.helpers(),
+        checks=(
+            CheckView(symbols("check_int_is_twos_complement"), "(-1 & 3) == 3"),
+            CheckView(symbols("check_code_is_twos_complement"), f"INT{width}_MIN + INT{width}_MAX == -1"),
+        ),
+        blocks=blocks,
+    )
+
+
+def _member(word: Word, symbols: Symbols) -> MemberView:
+    signal, _, age = word.name.rpartition("_")
+    comment = f"{signal}, {age} sample{'' if age == '1' else 's'} ago" if signal and age.isdigit() else ""
+    return MemberView(container(word.bits), symbols.local(word.name), comment)
+
+
+class _Printer:
+    """Steps as C statements; remembers which helpers they call."""
+
+    def __init__(self, program: Program, symbols: Symbols, may_overflow: frozenset[str]) -> None:
+        self.program, self.symbols, self.may_overflow = program, symbols, may_overflow
+        self.called: set[tuple[str, int]] = set()
+
+    def block(self, number: int) -> BlockView:
+        """The statements of section ``number``, 1 for the first."""
+        section = self.program.sections[number - 1]
+        lines: list[LineView] = []
+        for step in section.steps:
+            if isinstance(step, Sum):
+                lines += self._sum(section, step)
+            else:
+                lines.append(LineView(f"{self._store(step.dest)} = {self._read(step.source)};"))
+        title = f"Section {number} of {len(self.program.sections)}: from {section.source} to {section.dest}."
+        return BlockView(title, tuple(lines))
+
+    def helpers(self) -> tuple[HelperView, ...]:
+        """The helpers that the printed statements call, and those which these call."""
+        needed = self.called | {("shift", bits) for kind, bits in self.called if kind in ("nearest", "even")}
+        ordered = sorted(needed, key=lambda call: (call[1], HELPER_ORDER.index(call[0])))
+        return tuple(
+            HelperView(kind, bits, self.symbols(f"{kind}_{bits}"), self.symbols(f"shift_{bits}"))
+            for kind, bits in ordered
+        )
+
+    def _sum(self, section: ProgramSection, step: Sum) -> list[LineView]:
+        total = f"sum_{step.dest}"
+        lines = []
+        for i, term in enumerate(step.terms):
+            product, negative = self._product(term, step.accumulator_bits)
+            if i == 0:
+                code = f"int{step.accumulator_bits}_t {total} = {'-' if negative else ''}{product};"
+            else:
+                code = f"{total} {'-' if negative else '+'}= {product};"
+            lines.append(LineView(code, _term_comment(section, term)))
+        return [*lines, LineView(f"{self._store(step.dest)} = {self._narrowed(step, total)};")]
+
+    def _product(self, term: Term, bits: int) -> tuple[str, bool]:
+        """The product of a term without its sign, and whether it is subtracted.
+
+        The range analysis bounds the magnitude of every factor and product, so neither sign can overflow.
+        """
+        word = self._read(term.word)
+        if term.factor == 1:
+            return word, False
+        factors = [integer(abs(term.coefficient), bits)]
+        if term.shift:
+            factors.append(integer(1 << term.shift, bits))
+        return " * ".join([*factors, word]), term.coefficient < 0
+
+    def _narrowed(self, step: Sum, total: str) -> str:
+        bits, dest = step.accumulator_bits, self.program.word(step.dest)
+        value = total
+        if step.right_shift:
+            value = f"{self._call(ROUNDING_HELPER[step.rounding], bits)}({value}, {step.right_shift})"
+        if step.dest in self.may_overflow and step.overflow is Overflow.SATURATE:
+            ends = f"{integer(dest.lowest, bits)}, {integer(dest.highest, bits)}"
+            value = f"{self._call('clamp', bits)}({value}, {ends})"
+        elif step.dest in self.may_overflow:
+            value = f"{self._call('wrap', bits)}({value}, {integer(dest.highest, bits)})"
+        return f"({container(dest.bits)}){value}" if container_bits(dest.bits) < bits else value
+
+    def _call(self, kind: str, bits: int) -> str:
+        self.called.add((kind, bits))
+        return self.symbols(f"{kind}_{bits}")
+
+    def _read(self, name: str) -> str:
+        word = self.program.word(name)
+        local = self.symbols.local(name)
+        return f"state->{local}" if word.role is Role.STATE else local
+
+    def _store(self, name: str) -> str:
+        word = self.program.word(name)
+        return self._read(name) if word.role is Role.STATE else f"const {container(word.bits)} {self._read(name)}"
+
+
+def _term_comment(section: ProgramSection, term: Term) -> str:
+    found = next((c for c in section.coefficients if c.name == term.label), None)
+    return "" if found is None else _coefficient_comment(found)
+
+
+def _coefficient_comment(coefficient: Coefficient) -> str:
+    error = signed(coefficient.error_last_places)
+    return (
+        f"{coefficient.name} = {coefficient.exact}: {coefficient.integer} * 2^{-coefficient.fraction_bits},"
+        f" off by {error} last places"
+    )

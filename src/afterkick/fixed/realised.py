@@ -1,0 +1,57 @@
+"""The filter that the integer coefficients realise, in the same terms as the exact sampled filter.
+
+The output rounding is left out: this is the linear part of what ships, and it is exact, since integers have exact roots.
+"""
+
+from collections.abc import Sequence
+
+from attrs import evolve
+from flint import acb, arb, fmpq, fmpq_poly
+
+from afterkick.fixed.program import Program
+from afterkick.model.roots import RADIANS, algebraic_roots
+from afterkick.sampling.pulse_transfer import PulseTransfer, ZRoot
+from afterkick.sampling.sampled import Sampled
+
+__all__ = ["realised"]
+
+
+def realised(program: Program, sampled: Sampled) -> Sampled:
+    """``sampled`` with the transfer function of the program's integers, in output units per input unit."""
+    gain = program.output_format.full_scale / program.input_format.full_scale
+    numerators, denominators = [], []
+    for section in program.sections:
+        gain *= fmpq(2) ** (section.a_fraction_bits - section.b_fraction_bits)
+        numerators.append(_trimmed(section.b))
+        denominators.append(_trimmed(section.a))
+    leading = sum(late for late, _ in numerators)
+    for _, b in numerators:
+        gain *= b[0]
+    for _, a in denominators:
+        gain /= a[0]
+    surplus = leading + sum(len(b) - 1 for _, b in numerators) - sum(len(a) - 1 for _, a in denominators)
+
+    def transfer() -> PulseTransfer:
+        poles = [root for _, a in denominators for root in _roots(a)]
+        poles += [ZRoot(acb(0), True, name=0)] * max(0, surplus)
+        zeros = [root for _, b in numerators for root in _roots(b)]
+        return PulseTransfer(arb(gain), leading, tuple(zeros), tuple(poles))
+
+    return evolve(sampled, attempt=transfer, warnings=())
+
+
+def _trimmed(coefficients: Sequence[int]) -> tuple[int, list[int]]:
+    """How many leading coefficients are zero, and the rest without trailing zeros."""
+    present = [index for index, value in enumerate(coefficients) if value]
+    return present[0], list(coefficients[present[0] : present[-1] + 1])
+
+
+def _roots(coefficients: Sequence[int]) -> list[ZRoot]:
+    """The roots in z of a polynomial in 1/z, as often as they occur."""
+    polynomial = fmpq_poly(list(reversed(coefficients)))
+    on_circle = len(coefficients) == 3 and coefficients[0] == coefficients[2]
+    return [
+        ZRoot(root.evaluate(), root.real, on_circle and not root.real, root.key)
+        for root, times in algebraic_roots(polynomial, RADIANS).items()
+        for _ in range(times)
+    ]

@@ -1,0 +1,173 @@
+"""The bit-true interpreter of a Program: integer for integer what the emitted C does.
+
+Up to a few stimuli run one by one in Python integers; more run side by side in numpy, where int64 suffices for every
+valid program (see ``ranges``).
+"""
+
+from collections.abc import Callable, Sequence
+from typing import Any
+
+import numpy as np
+from attrs import frozen
+from numpy.typing import NDArray
+
+from afterkick.errors import Problem, Refused
+from afterkick.fixed.narrow import fit, shift_right
+from afterkick.fixed.program import Program, Role, Sum
+from afterkick.fixed.ranges import Analysis, analyse
+
+__all__ = ["Trace", "simulate", "trace"]
+
+FEW_STIMULI = 8
+"""So many columns are still faster one by one."""
+
+# A word's value: a Python integer, or an array with one entry a stimulus.
+Values = list[Any]
+
+
+@frozen(eq=False)
+class Trace:
+    """What a run leaves behind."""
+
+    outputs: NDArray[np.int64]
+    """Of the shape of the inputs."""
+    state: dict[str, NDArray[np.int64]]
+    """Each state word after the last sample; one entry a stimulus, or shape () for a single one."""
+    overflows: dict[str, int]
+    """How often each word's overflow rule acted, over all samples and stimuli; words that can't overflow are left out.
+    """
+
+
+def simulate(program: Program, inputs: NDArray[np.integer[Any]] | Sequence[int]) -> NDArray[np.int64]:
+    """The output codes for input codes of shape (n,) or (n, m): n samples of m stimuli, each from a reset state.
+
+    :raises Refused: for inputs that are not integers within the input word.
+    """
+    return trace(program, inputs).outputs
+
+
+def trace(
+    program: Program,
+    inputs: NDArray[np.integer[Any]] | Sequence[int],
+    state: dict[str, int] | None = None,
+) -> Trace:
+    """As :func:`simulate`, with the final state and the overflow counts; starts from ``state``, zero where absent."""
+    codes = _checked(program, inputs)
+    analysis = analyse(program)
+    columns = codes[:, None] if codes.ndim == 1 else codes
+    machine = _Machine(program, analysis)
+    start = {name: int(value) for name, value in (state or {}).items()}
+    if columns.shape[1] <= FEW_STIMULI:
+        runs = [machine.run_one(column.tolist(), start) for column in columns.T]
+        outputs = np.array([run[0] for run in runs], dtype=np.int64).reshape(columns.T.shape).T
+        final = {name: np.array([run[1][name] for run in runs], dtype=np.int64) for name in machine.state_names}
+    else:
+        # An invalid program may exceed 64 bits: object arrays hold Python integers.
+        outputs, final = machine.run_many(columns.astype(object if analysis.faults else np.int64), start)
+    if codes.ndim == 1:
+        final = {name: value[0] for name, value in final.items()}
+    return Trace(np.ascontiguousarray(outputs.reshape(codes.shape)), final, machine.overflows())
+
+
+def _checked(program: Program, inputs: NDArray[np.integer[Any]] | Sequence[int]) -> NDArray[np.int64]:
+    codes = np.asarray(inputs)
+    word = program.word(program.input)
+    accepted = f"integers from {word.lowest} to {word.highest}, of shape (n,) or (n, m)"
+    if codes.ndim not in (1, 2) or (codes.size and not np.issubdtype(codes.dtype, np.integer)):
+        found = f"an array of shape {codes.shape} and type {codes.dtype}"
+        raise Refused(Problem("inputs", found, accepted, "round the samples to input codes"))
+    if codes.size and (codes.min() < word.lowest or codes.max() > word.highest):
+        found = f"codes from {codes.min()} to {codes.max()}"
+        raise Refused(Problem("inputs", found, accepted, "scale or clip the samples"))
+    return codes.astype(np.int64)
+
+
+class _Machine:
+    """A program compiled into one closure a Sum; moves rebind list entries, nothing is copied."""
+
+    def __init__(self, program: Program, analysis: Analysis) -> None:
+        self.index = {word.name: i for i, word in enumerate(program.words)}
+        self.state_names = [word.name for word in program.words if word.role is Role.STATE]
+        self.input, self.output = self.index[program.input], self.index[program.output]
+        self.counts = {name: 0 for name in self.index if name in analysis.may_overflow}
+        self.steps: list[Callable[[Values], None]] = []
+        moves: list[tuple[int, int]] = []
+        for step in program.steps:
+            if isinstance(step, Sum):
+                self._flush(moves)
+                self.steps.append(self._sum(program, step, step.dest in analysis.may_overflow or bool(analysis.faults)))
+            else:
+                moves.append((self.index[step.dest], self.index[step.source]))
+        self._flush(moves)
+
+    def _flush(self, moves: list[tuple[int, int]]) -> None:
+        """Consecutive moves become one closure."""
+        if moves:
+            pairs = tuple(moves)
+            moves.clear()
+
+            def move(words: Values) -> None:
+                for dest, source in pairs:
+                    words[dest] = words[source]
+
+            self.steps.append(move)
+
+    def _sum(self, program: Program, step: Sum, may_overflow: bool) -> Callable[[Values], None]:
+        factors = tuple((term.factor, self.index[term.word]) for term in step.terms)
+        (first, first_word), rest = factors[0], factors[1:]
+        dest, name = self.index[step.dest], step.dest
+        bits, right_shift, rounding, overflow = (
+            program.word(step.dest).bits,
+            step.right_shift,
+            step.rounding,
+            step.overflow,
+        )
+        counts = self.counts
+
+        def add(words: Values) -> None:
+            total = first * words[first_word]
+            for factor, word in rest:
+                total = total + factor * words[word]
+            total = shift_right(total, right_shift, rounding)
+            if may_overflow:
+                stored = fit(total, bits, overflow)
+                changed = stored != total
+                if changed is True or (changed is not False and changed.any()):
+                    counts[name] = counts.get(name, 0) + int(np.count_nonzero(changed))
+                total = stored
+            words[dest] = total
+
+        return add
+
+    def _start(self, zero: Any, state: dict[str, int]) -> Values:
+        unknown = sorted(set(state) - set(self.state_names))
+        if unknown:
+            accepted = ", ".join(self.state_names) or "no state"
+            raise Refused(Problem("state", f"the unknown words {', '.join(unknown)}", accepted))
+        return [zero + state.get(name, 0) for name in self.index]
+
+    def run_one(self, codes: list[int], state: dict[str, int]) -> tuple[list[int], dict[str, int]]:
+        """One stimulus in Python integers."""
+        words = self._start(0, state)
+        outputs = []
+        for code in codes:
+            words[self.input] = code
+            for step in self.steps:
+                step(words)
+            outputs.append(words[self.output])
+        return outputs, {name: words[self.index[name]] for name in self.state_names}
+
+    def run_many(self, codes: NDArray[Any], state: dict[str, int]) -> tuple[NDArray[np.int64], dict[str, Any]]:
+        """Stimuli side by side."""
+        words = self._start(np.zeros(codes.shape[1], dtype=codes.dtype), state)
+        outputs = np.empty(codes.shape, dtype=np.int64)
+        for n, row in enumerate(codes):
+            words[self.input] = row
+            for step in self.steps:
+                step(words)
+            outputs[n] = words[self.output]
+        return outputs, {name: words[self.index[name]].astype(np.int64) for name in self.state_names}
+
+    def overflows(self) -> dict[str, int]:
+        """The counts so far."""
+        return dict(self.counts)

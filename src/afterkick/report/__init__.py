@@ -1,0 +1,1 @@
+"""What the road found, as text for the terminal and as JSON."""

@@ -1,0 +1,50 @@
+"""Closed forms and numbers as a reader would write them."""
+
+from collections.abc import Sequence
+
+from flint import arb, fmpq
+
+from afterkick.model.partial_fractions import Mode
+from afterkick.numbers import fraction, mid_float
+
+__all__ = ["closed_form", "exact_text", "number"]
+
+
+def number(value: float, digits: int = 6) -> str:
+    """A float in as few characters as its digits allow."""
+    return f"{value:.{digits}g}"
+
+
+def exact_text(value: fmpq) -> str:
+    """A rational as an integer, a short exact decimal, or else six digits."""
+    exact = fraction(value)
+    if exact.denominator == 1 and abs(exact.numerator) < 10**9:
+        return str(exact.numerator)
+    text = repr(float(exact))
+    return text if len(text) <= 12 and fmpq(*float(text).as_integer_ratio()) == value else number(float(exact))
+
+
+def closed_form(modes: Sequence[Mode], dirac: arb, variable: str = "t") -> str:
+    """sum of t^j e^(-at) (A cos wt + B sin wt), six digits; the Dirac part first."""
+    terms = [] if dirac.is_zero() else [f"{number(mid_float(dirac))} δ({variable})"]
+    for mode in modes:
+        factorial = 1
+        for j, coefficient in enumerate(mode.coefficients):
+            factorial *= max(j, 1)
+            terms += _mode_terms(mode, j, coefficient.real / factorial, coefficient.imag / factorial, variable)
+    return " + ".join(terms).replace("+ -", "- ") if terms else "0"
+
+
+def _mode_terms(mode: Mode, power: int, re: arb, im: arb, variable: str) -> list[str]:
+    decay = "" if mode.pole.real.is_zero() else f"e^({number(mid_float(mode.pole.real))} {variable})"
+    growth = "" if power == 0 else variable if power == 1 else f"{variable}^{power}"
+    if mode.real:
+        factors = [(re, "")]
+    else:
+        turn = f"{number(mid_float(mode.pole.imag))} {variable}"
+        factors = [(2 * re, f"cos({turn})"), (-2 * im, f"sin({turn})")]
+    return [
+        " ".join(part for part in (number(mid_float(amplitude)), growth, decay, wave) if part)
+        for amplitude, wave in factors
+        if not amplitude.contains(0)
+    ]

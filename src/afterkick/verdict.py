@@ -1,0 +1,119 @@
+"""The end of the road: everything found about one design, judged against its budget."""
+
+from functools import cached_property
+
+from attrs import frozen
+from flint import fmpq
+
+from afterkick.design.schema import Design
+from afterkick.fixed.direct import direct_program
+from afterkick.fixed.program import Program, quantised_dc_gain
+from afterkick.fixed.realised import realised
+from afterkick.design.digest import digest
+from afterkick.model.forms import model_of
+from afterkick.model.model import Model
+from afterkick.numbers import fraction
+from afterkick.sampling import Sampled, sample
+from afterkick.sampling.response_errors import ResponseErrors, response_errors
+
+__all__ = ["Assessment", "BudgetLine", "assess"]
+
+HOLDS, FALLS_SHORT, UNKNOWN = "holds", "falls short", "unknown"
+
+_LATER = ("worst_case_counts", "noise_counts", "dead_band_counts", "instructions")
+
+
+@frozen
+class BudgetLine:
+    """One line of [budget] and what was found."""
+
+    item: str
+    limit: float
+    found: float | None
+    """In the unit of the item's name; None where it was not judged."""
+    remark: str = ""
+
+    @property
+    def holds(self) -> bool | None:
+        """Whether the limit is kept; None where it was not judged."""
+        return None if self.found is None else self.found <= self.limit
+
+
+@frozen(eq=False)
+class Assessment:
+    """One design after the whole road."""
+
+    design: Design
+    model: Model
+    sampled: Sampled
+    program: Program
+    digest: str
+    errors: ResponseErrors
+    """Of the exact sampled filter against the continuous model."""
+    shipped: ResponseErrors
+    """Of the filter with integer coefficients against the continuous model; the output rounding is left out."""
+    dc_gain: fmpq | None
+    """Of the integer coefficients, exact; None with an integrator."""
+    budget: tuple[BudgetLine, ...]
+
+    @cached_property
+    def verdict(self) -> str:
+        """``holds``, ``falls short``, or ``unknown`` where no line falls short but one was not judged."""
+        judged = [line.holds for line in self.budget]
+        if False in judged or self.sampled.model.stability == "unstable":
+            return FALLS_SHORT
+        return UNKNOWN if None in judged else HOLDS
+
+
+def assess(design: Design) -> Assessment:
+    """Walk the road: model, sampled, program, errors, budget.
+
+    :raises Refused: what can't be done, naming the key and a remedy.
+    """
+    model = model_of(design)
+    sampled = sample(model, design.sampling)
+    name = design.design.name
+    mark = digest(design)
+    program = direct_program(
+        sampled, design.arithmetic, design.signals, name, title=design.design.title, digest=mark
+    )
+    errors = response_errors(sampled, design.budget.band_hz)
+    shipped = response_errors(realised(program, sampled), design.budget.band_hz)
+    return Assessment(
+        design,
+        model,
+        sampled,
+        program,
+        mark,
+        errors,
+        shipped,
+        quantised_dc_gain(program),
+        tuple(_budget_lines(design, model, shipped)),
+    )
+
+
+def _budget_lines(design: Design, model: Model, shipped: ResponseErrors) -> list[BudgetLine]:
+    """The lines that the file gives, in the order of DESIGN's table; the shipped integers are judged."""
+    impulse, band = shipped.impulse, shipped.band
+    late = f"{100 * impulse.peak_aligned:.2g} % with a delay of {impulse.delay_samples:.3g} samples taken out"
+    found: dict[str, tuple[float | None, str]] = {
+        "impulse_peak_percent": (100 * impulse.peak, late),
+        "impulse_rms_percent": (100 * impulse.rms, ""),
+        "magnitude_db": (abs(band.magnitude_db), f"largest at {band.magnitude_at_hz:.4g} Hz"),
+        "phase_deg": (abs(band.phase_deg), f"largest at {band.phase_at_hz:.4g} Hz"),
+        "dc_gain_ppm": _dc_gain_ppm(model, shipped),
+    }
+    found |= {item: (None, "not supported yet") for item in _LATER}
+    limits = {item: getattr(design.budget, item) for item in found}
+    return [
+        BudgetLine(item, float(fraction(limit)), *found[item]) for item, limit in limits.items() if limit is not None
+    ]
+
+
+def _dc_gain_ppm(model: Model, shipped: ResponseErrors) -> tuple[float | None, str]:
+    if model.poles_at_origin:
+        assert shipped.growth_relative is not None
+        return 1e6 * abs(shipped.growth_relative), "of the growth: the model integrates"
+    if shipped.dc_gain_relative is None:
+        return 0.0, "zero at 0 Hz is kept exactly"
+    return 1e6 * abs(shipped.dc_gain_relative), ""

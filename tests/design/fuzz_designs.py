@@ -1,0 +1,209 @@
+"""Mutated design files: reading one gives a Design or its problems, never another exception.
+
+python tests/design/fuzz_designs.py --count 20000 --seed 1
+"""
+
+import argparse
+import random
+import re
+from collections.abc import Callable, Iterator
+from pathlib import Path
+
+from afterkick.design import Design, read_design
+from afterkick.design.schema import BLOCK_TYPES, FAMILIES, METHODS
+from afterkick.errors import Refused
+
+__all__ = ["judge", "mutations"]
+
+GOOD = [path.read_text("utf-8") for path in sorted((Path(__file__).parent / "good").glob("*.toml"))]
+
+TOKEN = re.compile(r'"[^"\n]*"|[\w.+-]+|\s+|[^\w\s]')
+NUMBER = re.compile(r"(?<![\w.])-?\d[\d.e+-]*")
+FINITE = re.compile(r"-?\d{1,30}(\.\d{1,30})?(e[+-]?\d{1,2})?")
+KEY = re.compile(r"(?m)^(\s*)(\w+)(\s*=)")
+
+NUMBERS = [
+    *("0", "-0.0", "1", "-1", "17", "33", "64", "65", "1e300", "1e301", "-1e-301", "1e-300", "nan", "inf", "-inf"),
+    *("1e99999999999999999999", "0x7fffffffffffffffffffff", "1_0", "0.1e-5", "12345678901234567890.123456789"),
+    *("00", "1.", ".5", "1e", "0b101", "0o17", "9" * 401, "9" * 5000, "0." + "3" * 401, "1e" + "9" * 2000),
+]
+VALUES = [
+    *(
+        '""',
+        '"x"',
+        "'x'",
+        "true",
+        "false",
+        "[]",
+        "{}",
+        "[[]]",
+        "[[[1]]]",
+        "[1, 'x']",
+        "{ a = 1 }",
+        "1979-05-27",
+        "07:32:00",
+    ),
+    *(
+        '"\\u202e"',
+        '"\\u0000"',
+        '"""a\nb"""',
+        '"*/"',
+        '"{{ x }}"',
+        '"??/"',
+        '"direct"',
+        '"float32"',
+        "[1, 2]",
+        "[2, 1]",
+    ),
+    *('"' + "long " * 60 + '"', "[" * 3000, "[" * 300 + "]" * 300, str([1] * 17), str([1] * 18), str([[1, 0]] * 17)),
+]
+NOISE = "\0\x1b\x7f\u00a0\u202e\u2028\ud800\ufeff\U0001f6a4é\"'\\[]{}=#,.\n\r\t-+_"
+
+
+def mutations(seed: int, count: int) -> Iterator[str]:
+    """``count`` texts, each a good design file with one to six random changes; the same for the same ``seed``."""
+    chance = random.Random(seed)
+    for _ in range(count):
+        text = chance.choice(GOOD)
+        for _ in range(chance.choice((1, 1, 1, 2, 3, 6))):
+            text = chance.choice(CHANGES)(chance, text)
+        yield text
+
+
+def judge(text: str) -> bool:
+    """Whether the text is a design; a refusal must say what, where and how to cure it."""
+    try:
+        return isinstance(read_design(text), Design)
+    except Refused as error:
+        refusal = error
+    assert refusal.problems, "a refusal without a problem"
+    for problem in refusal.problems:
+        assert all((problem.where, problem.found, problem.accepted, problem.remedy)), problem
+        assert len(str(problem)) < 2000, "a message of more than a screen"
+        assert str(problem).isprintable(), "a message that a terminal can't show"
+    return False
+
+
+def _swap_tokens(chance: random.Random, text: str) -> str:
+    tokens = TOKEN.findall(text)
+    if len(tokens) > 1:
+        i, j = chance.sample(range(len(tokens)), 2)
+        tokens[i], tokens[j] = tokens[j], tokens[i]
+    return "".join(tokens)
+
+
+def _delete_token(chance: random.Random, text: str) -> str:
+    tokens = TOKEN.findall(text)
+    if tokens:
+        del tokens[chance.randrange(len(tokens))]
+    return "".join(tokens)
+
+
+def _replace_match(pattern: re.Pattern[str], values: list[str]) -> Callable[[random.Random, str], str]:
+    def change(chance: random.Random, text: str) -> str:
+        matches = list(pattern.finditer(text))
+        if not matches:
+            return text
+        match = chance.choice(matches)
+        return text[: match.start()] + chance.choice(values) + text[match.end() :]
+
+    return change
+
+
+def _nudge_number(chance: random.Random, text: str) -> str:
+    """A change that often leaves a good design, so that the stages behind the reader get their share."""
+    matches = [match for match in NUMBER.finditer(text) if FINITE.fullmatch(match.group())]
+    if not matches:
+        return text
+    match = chance.choice(matches)
+    factor = chance.choice((0.1, 0.5, 0.999, 1.001, 2, 3, 10, 1000, -1))
+    number = float(match.group()) * factor
+    nudged = str(int(number)) if match.group().isdigit() and number == int(number) else repr(number)
+    return text[: match.start()] + nudged + text[match.end() :]
+
+
+def _other_word(chance: random.Random, text: str) -> str:
+    words = chance.choice((METHODS, FAMILIES, tuple(BLOCK_TYPES), ("half", "full"), ("nearest", "floor", "even")))
+    places = [match for word in words for match in re.finditer(f'"{word}"', text)]
+    if not places:
+        return text
+    match = chance.choice(places)
+    return f'{text[: match.start()]}"{chance.choice(words)}"{text[match.end() :]}'
+
+
+def _misspell_key(chance: random.Random, text: str) -> str:
+    matches = list(KEY.finditer(text))
+    if not matches:
+        return text
+    start, end = chance.choice(matches).span(2)
+    place = chance.randrange(start, end)
+    return text[:place] + chance.choice(["", "x", "_", "é", '"', "."]) + text[place + chance.randrange(2) :]
+
+
+def _delete_lines(chance: random.Random, text: str) -> str:
+    lines = text.splitlines(keepends=True)
+    if lines:
+        start = chance.randrange(len(lines))
+        del lines[start : start + chance.choice((1, 1, 2, 5))]
+    return "".join(lines)
+
+
+def _repeat_line(chance: random.Random, text: str) -> str:
+    lines = text.splitlines(keepends=True)
+    if lines:
+        lines.insert(chance.randrange(len(lines)), chance.choice(lines))
+    return "".join(lines)
+
+
+def _truncate(chance: random.Random, text: str) -> str:
+    return text[: chance.randrange(len(text) + 1)]
+
+
+def _noise(chance: random.Random, text: str) -> str:
+    place = chance.randrange(len(text) + 1)
+    return text[:place] + chance.choice(NOISE) + text[place + chance.randrange(2) :]
+
+
+def _byte_noise(chance: random.Random, text: str) -> str:
+    raw = bytearray(text.encode("utf-8", "surrogatepass"))
+    for _ in range(chance.choice((1, 3))):
+        if raw:
+            raw[chance.randrange(len(raw))] = chance.randrange(256)
+    return raw.decode("utf-8", chance.choice(("replace", "surrogateescape")))
+
+
+CHANGES: list[Callable[[random.Random, str], str]] = [
+    _swap_tokens,
+    _delete_token,
+    _replace_match(NUMBER, NUMBERS),
+    _replace_match(NUMBER, VALUES),
+    _replace_match(re.compile(r'"[^"\n]*"'), VALUES + NUMBERS),
+    _replace_match(re.compile(r"\[[^\[\]\n]*\]"), VALUES + NUMBERS),
+    *([_nudge_number] * 5),
+    *([_other_word] * 3),
+    _misspell_key,
+    _delete_lines,
+    _repeat_line,
+    _truncate,
+    _noise,
+    _byte_noise,
+]
+
+
+def main() -> None:
+    parser = argparse.ArgumentParser(description=__doc__)
+    parser.add_argument("--count", type=int, default=20000)
+    parser.add_argument("--seed", type=int, default=1)
+    options = parser.parse_args()
+    accepted = 0
+    for number, text in enumerate(mutations(options.seed, options.count)):
+        try:
+            accepted += judge(text)
+        except Exception:
+            print(f"seed {options.seed}, text {number}:\n{text!r}")
+            raise
+    print(f"{options.count} mutated designs, seed {options.seed}: {accepted} read, {options.count - accepted} refused")
+
+
+if __name__ == "__main__":
+    main()
