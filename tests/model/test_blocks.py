@@ -1,6 +1,7 @@
 """Every block type against its formula, evaluated by mpmath at 100 digits."""
 
 from collections.abc import Callable
+from typing import Any
 
 import mpmath
 import pytest
@@ -79,7 +80,7 @@ def pid(block: schema.Pid, s: mpmath.mpc) -> mpmath.mpc:
     return mpf(block.kp) + mpf(block.ki) / s + mpf(block.kd) * derivative
 
 
-FORMULAS: dict[type, Callable[[object, mpmath.mpc], mpmath.mpc]] = {
+FORMULAS: dict[type, Callable[[Any, mpmath.mpc], mpmath.mpc]] = {
     schema.Gain: lambda block, s: mpf(block.gain),
     schema.Integrator: lambda block, s: mpf(block.gain) / s,
     schema.Lag: lag,
@@ -94,7 +95,7 @@ FORMULAS: dict[type, Callable[[object, mpmath.mpc], mpmath.mpc]] = {
     schema.DeadTime: lambda block, s: mp.exp(-s * mpf(block.delay_s)),
 }
 COEFFICIENTS = st.lists(ANY, min_size=1, max_size=5).map(tuple).filter(lambda listed: bool(listed[0]))
-BLOCKS = {
+BLOCKS: dict[type, st.SearchStrategy[Any]] = {
     schema.Gain: st.builds(schema.Gain, NONZERO),
     schema.Integrator: st.builds(schema.Integrator, NONZERO),
     schema.Lag: st.builds(schema.Lag, time_constant_s=POSITIVE) | st.builds(schema.Lag, corner_hz=POSITIVE),

@@ -198,7 +198,7 @@ def test_bessel_delay_normalized_poles(order: int) -> None:
 
 @pytest.mark.parametrize("order", BESSEL_CASCADE)
 def test_bessel_half_power_cascade(order: int) -> None:
-    rows = sorted(BESSEL_CASCADE[order], key=lambda row: float(row[2] or 0), reverse=True)
+    rows = reversed(BESSEL_CASCADE[order])
     for pole, (a, b, quality) in zip(unit_poles("bessel", order), rows, strict=True):
         if quality is None:
             assert_printed(-1 / pole.real, a)
@@ -299,10 +299,11 @@ def test_chebyshev_power(order: int, w: Fraction) -> None:
     t = (1 / x).chebyshev_t(order) ** 2
     found = power(build("inverse-chebyshev", "lowpass", order, low=fmpq(1)), x)
     assert found.overlaps(t / (square + t))
+    assert found.rad() < arb(2) ** -200  # absolute: a zero of the filter may be hit
 
 
 @pytest.mark.parametrize("order", [2, 3, 8, 16])
-def test_bessel_is_maximally_flat_in_delay(order: int) -> None:
+def test_bessel_power(order: int) -> None:
     """|theta(0) / theta(j w c)|^2 with theta by its recurrence and the half-power c found by mpmath at 60 digits."""
     with mpmath.workdps(60):
 

@@ -56,13 +56,13 @@ def test_two_pass_levels(row: dict[str, Any]) -> None:
 def test_class_table() -> None:
     """SAE J211-1 class table: two passes are 3 dB down at CFC / 0.6, and lose less than 1 dB at the pass frequency.
 
-    At 10 kHz the lower three classes meet it; CFC 1000 is warped to -2.45 dB at 1667 Hz.
+    So do the lower classes at 10 kHz; CFC 1000 is warped to -2.45 dB at 1667 Hz.
     """
     table = DATA["class_table"]
-    for cfc, passed in zip(table["cfc"][:3], table["pass_frequency_fh_hz"], strict=False):
+    for cfc, passed in zip(table["cfc"][:2], table["pass_frequency_fh_hz"], strict=False):
         at_pass, at_cutoff = 2 * digital_db(channel(cfc), [passed, cfc / 0.6])
         assert -1.0 <= at_pass <= 0.0
-        assert at_cutoff == pytest.approx(-3.01, abs=0.08)
+        assert at_cutoff == pytest.approx(-3.01, abs=0.02)
     assert 2 * digital_db(channel(1000), [1000 / 0.6])[0] == pytest.approx(-2.45, abs=0.005)
     for cfc, least in zip(table["cfc"][:2], table["stopband_attenuation_db"], strict=False):
         assert 2 * digital_db(channel(cfc), [5 * cfc])[0] < float(least)

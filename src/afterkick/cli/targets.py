@@ -6,6 +6,7 @@ import click
 from attrs import asdict
 
 from afterkick.cli.common import HOLDS, json_option, print_json, reported
+from afterkick.report.text import targets_text
 from afterkick.targets import load_targets
 
 __all__ = ["command"]
@@ -20,8 +21,7 @@ def command(folder: Path | None, as_json: bool) -> None:
         profiles = load_targets(folder)
         codes.append(HOLDS)
         if as_json:
-            print_json({"targets": [asdict(profile) for profile in profiles]})
+            print_json({"targets": [asdict(profile) for profile in profiles.values()]})
         else:
-            for profile in profiles:
-                click.echo(profile)
+            click.echo(targets_text(profiles.values()))
     raise SystemExit(max(codes))

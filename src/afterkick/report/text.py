@@ -1,6 +1,7 @@
 """One screen for the terminal."""
 
-from collections.abc import Sequence
+from collections.abc import Iterable, Mapping, Sequence
+from typing import Any
 
 from flint import arb
 
@@ -13,9 +14,10 @@ from afterkick.report.data import REPORT_BITS
 from afterkick.report.formulas import closed_form, exact_text, number
 from afterkick.report.response import Kick
 from afterkick.sampling.response_errors import CONVENTION, ResponseErrors
+from afterkick.targets import TargetProfile
 from afterkick.verdict import Assessment, BudgetLine
 
-__all__ = ["check_text", "headline", "kick_text"]
+__all__ = ["check_text", "headline", "kick_text", "targets_text", "tour_text"]
 
 _LABEL = 12
 
@@ -59,7 +61,7 @@ def _model_lines(found: Assessment) -> list[str]:
         lines += [_row("  h(t)", f"{closed_form(model.response_modes(), model.feedthrough())}  [{unit}]{shift}")]
         if model.free is not None:
             free = closed_form(model.free.modes(), arb(0))
-            lines += [_row("  at rest", f"y(t) = {free}  [{signals.output.unit or '1'}], from the values before 0")]
+            lines += [_row("  free", f"y(t) = {free}  [{signals.output.unit or '1'}], from the values before 0")]
     return lines + [_row("  at t = 0", _jumps_text(model))]
 
 
@@ -193,4 +195,42 @@ def kick_text(design: Design, rows: Kick) -> str:
     lines.append(f"{'n':>6} {'t [s]':>14} {'analytic h(t)':>16} {'sampled h[n]/T':>16} {'integer':>16} {'counts':>12}")
     columns = zip(rows.n, rows.t, rows.analytic, rows.sampled, rows.integer, rows.counts, strict=True)
     lines += [f"{n:>6} {t:>14.8g} {h:>16.8g} {d:>16.8g} {i:>16.8g} {c:>12}" for n, t, h, d, i, c in columns]
+    return "\n".join(lines)
+
+
+def tour_text(found: Assessment, stop: Mapping[str, Any], seconds: float) -> str:
+    """One demo design in a few lines."""
+    model, program, shipped = found.model, found.program, found.shipped
+    with working_bits(128):
+        form = closed_form(model.response_modes(), model.feedthrough())
+    agreement = "equal integer for integer" if stop["equal"] else "DIFFERS from the simulator"
+    lines = [
+        headline(found),
+        _row("  model", f"order {model.order}; h(t) = {form}"),
+        _row("  sampled", f"{found.sampled.method} at {exact_text(found.sampled.rate_hz)} Hz, {_delay_text(found)}"),
+        _row(
+            "  integers",
+            f"{program.data_bits}-bit data, {program.coefficient_bits}-bit coefficients, "
+            f"{len(program.sections)} section{'s' if len(program.sections) > 1 else ''}; impulse error "
+            f"{100 * shipped.impulse.peak:.3g} % peak, {100 * shipped.impulse.rms:.3g} % r.m.s.",
+        ),
+        _row("  C", f"{stop['c_lines']} lines; compiled by {stop['compiler']}; {stop['samples']} samples {agreement}"),
+        _row("  time", f"{seconds:.2f} s"),
+        "",
+    ]
+    return "\n".join(lines)
+
+
+def _delay_text(found: Assessment) -> str:
+    total = found.model.dead_time_s * found.sampled.rate_hz
+    return "no dead time" if total == 0 else f"{exact_text(total)} samples of dead time"
+
+
+def targets_text(profiles: Iterable[TargetProfile]) -> str:
+    """A table of profiles."""
+    lines = [f"{'name':<14}{'word':>5}{'int':>5}  {'products in one instruction':<58}title"]
+    lines += [
+        f"{p.name:<14}{p.word_bits:>5}{p.int_bits:>5}  {', '.join(p.multipliers) or 'none':<58}{p.title}"
+        for p in profiles
+    ]
     return "\n".join(lines)

@@ -1,0 +1,69 @@
+"""``afterkick tour``."""
+
+from time import monotonic
+from typing import Any
+
+import click
+import numpy as np
+
+from afterkick.bench.host import run_on_host
+from afterkick.cli.common import FALLS_SHORT, HOLDS, json_option, print_json, reported
+from afterkick.design import read_design
+from afterkick.emit import emit_c
+from afterkick.fixed.simulate import simulate
+from afterkick.report.notes import emitted_notes
+from afterkick.report.text import tour_text
+from afterkick.starters import STARTERS, starter_text
+from afterkick.verdict import assess
+
+__all__ = ["command"]
+
+_SAMPLES = 4096
+_CAUTION = (
+    "These designs are invented. Before a filter moves a rudder or guards a motor, verify it on the real hardware; "
+    "local codes and licensed practice come first."
+)
+
+
+@click.command("tour", help="The whole road on the demo designs: model, sampling, integers, C, compiled and compared.")
+@json_option
+def command(as_json: bool) -> None:
+    """Writes nothing but a temporary folder for the compiler."""
+    stops: list[dict[str, Any]] = []
+    exit_code = HOLDS
+    for k, (starter, shows) in enumerate(STARTERS.items(), start=1):
+        click.echo(f"[{k}/{len(STARTERS)}] {starter}: {shows}", err=True)
+        with reported(starter) as codes:
+            stop, text = _stop(starter, shows)
+            stops.append(stop)
+            codes.append(HOLDS if stop["verdict"] == "holds" and stop["equal"] else FALLS_SHORT)
+            if not as_json:
+                click.echo(text)
+        exit_code = max(exit_code, *codes)
+    if as_json:
+        print_json({"stops": stops})
+    else:
+        click.echo(f"{_CAUTION}\nNext: afterkick new NAME, then afterkick check NAME.toml")
+    raise SystemExit(exit_code)
+
+
+def _stop(starter: str, shows: str) -> tuple[dict[str, Any], str]:
+    start = monotonic()
+    found = assess(read_design(starter_text(starter)))
+    files = emit_c(found.program, notes=emitted_notes(found))
+    word = found.program.word(found.program.input)
+    codes = np.random.default_rng(1).integers(word.lowest, word.highest, size=_SAMPLES, endpoint=True)
+    codes[: _SAMPLES // 4] = 0
+    codes[0], codes[_SAMPLES // 8 : _SAMPLES // 4] = word.highest, word.lowest
+    run = run_on_host(files, found.program, codes)
+    equal = bool(np.array_equal(run.outputs, simulate(found.program, codes))) and run.selftest == -1
+    stop = {
+        "design": starter,
+        "shows": shows,
+        "verdict": found.verdict,
+        "samples": _SAMPLES,
+        "equal": equal,
+        "compiler": run.compiler,
+        "c_lines": sum(text.count("\n") for text in files.values()),
+    }
+    return stop, tour_text(found, stop, monotonic() - start)
