@@ -28,7 +28,7 @@ def emit_c(program: Program, *, notes: tuple[str, ...] = (), templates: Path | N
     :raises Refused: for a program whose sums could overflow, a name that can't be a prefix of C symbols, or a template
         that can't be used.
     """
-    from jinja2 import ChoiceLoader, Environment, FileSystemLoader, StrictUndefined, TemplateError
+    from jinja2 import ChoiceLoader, Environment, FileSystemLoader, StrictUndefined
 
     folders = [] if templates is None else [_own_folder(templates)]
     folders.append(resource_folder("templates") / LANGUAGE)
@@ -46,9 +46,13 @@ def emit_c(program: Program, *, notes: tuple[str, ...] = (), templates: Path | N
     for ending, template in FILES.items():
         try:
             files[view.symbols.file(ending)] = environment.get_template(template).render(view=view, test=test)
-        except TemplateError as error:
+        except Exception as error:  # a template is a program of the user's own: it can raise anything
+            if templates is None:
+                raise
             where = f"template {LANGUAGE}/{template}"
-            raise Refused(Problem(where, str(error), "a template that renders", "correct the template")) from error
+            raise Refused(
+                Problem(where, f"{type(error).__name__}: {error}", "a template that renders", "correct the template")
+            ) from error
     return files
 
 

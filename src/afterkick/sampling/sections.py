@@ -7,7 +7,7 @@ it has a zero at z = 1; the first carries the rest of the gain.
 
 from collections.abc import Sequence
 
-from attrs import frozen
+from attrs import evolve, field, frozen
 from flint import arb
 
 from afterkick.numbers import mid_float
@@ -22,21 +22,23 @@ class Section:
 
     b: tuple[arb, arb, arb]
     a: tuple[arb, arb, arb]
+    b_at_one: arb = field(eq=False)
+    """b[0] + b[1] + b[2], near z = 1 the number that decides the gain; the point zero for a zero at z = 1."""
+    a_at_one: arb = field(eq=False)
+    """1 + a[1] + a[2], likewise; the point zero for a pole at z = 1."""
+
+    @b_at_one.default
+    def _b_sum(self) -> arb:
+        return self.b[0] + self.b[1] + self.b[2]
+
+    @a_at_one.default
+    def _a_sum(self) -> arb:
+        return self.a[0] + self.a[1] + self.a[2]
 
     @property
     def order(self) -> int:
         """1 or 2."""
         return 1 if self.a[2].is_zero() and self.b[2].is_zero() else 2
-
-    @property
-    def b_at_one(self) -> arb:
-        """b[0] + b[1] + b[2]: near z = 1 the number that decides the gain."""
-        return self.b[0] + self.b[1] + self.b[2]
-
-    @property
-    def a_at_one(self) -> arb:
-        """1 + a[1] + a[2]: near z = 1 the number that decides the gain."""
-        return self.a[0] + self.a[1] + self.a[2]
 
 
 def paired(transfer: PulseTransfer) -> tuple[Section, ...] | None:
@@ -65,7 +67,7 @@ def paired(transfer: PulseTransfer) -> tuple[Section, ...] | None:
     for scale in scales[:-1]:
         scales[-1] /= scale
     return tuple(
-        Section(_three([value * scale for value in section.b]), section.a)
+        evolve(section, b=_three([value * scale for value in section.b]), b_at_one=section.b_at_one * scale)
         for section, scale in reversed(list(zip(sections, scales, strict=True)))
     )
 
@@ -112,7 +114,15 @@ def _nearest(group: Sequence[ZRoot], zeros: Sequence[ZRoot], must_take_pair: boo
 def _section(poles: Sequence[ZRoot], zeros: Sequence[ZRoot], late: int) -> Section:
     a = expanded(poles)
     b = [arb(0)] * late + expanded(zeros)
-    return Section(_three(b), _three(a))
+    return Section(_three(b), _three(a), _at_one(zeros), _at_one(poles))
+
+
+def _at_one(roots: Sequence[ZRoot]) -> arb:
+    """prod(1 - root), which a root at exactly 1 makes exactly zero."""
+    product = arb(1)
+    for root in roots:
+        product *= sum(root.factor(), arb(0))
+    return product
 
 
 def _three(values: Sequence[arb]) -> tuple[arb, arb, arb]:
