@@ -16,6 +16,7 @@ from flint import acb, arb, ctx, fmpq
 from afterkick.errors import Uncertified
 
 __all__ = [
+    "COINCIDENCE_BITS",
     "HIGHEST_BITS",
     "LOWEST_BITS",
     "accurate",
@@ -30,11 +31,13 @@ __all__ = [
     "real_part",
     "round_to_integer",
     "to_text",
+    "vanishes",
     "working_bits",
 ]
 
 LOWEST_BITS = 128
 HIGHEST_BITS = 16384
+COINCIDENCE_BITS = 2048
 
 Result = TypeVar("Result")
 
@@ -91,6 +94,18 @@ def is_exactly_zero(value: arb | acb) -> bool:
 def accurate(value: arb | acb, bits: int) -> bool:
     """Whether a ball is exact, or known to ``bits`` bits relative to its own magnitude."""
     return bool(value.is_exact()) or int(value.rel_accuracy_bits()) >= bits
+
+
+def vanishes(value: arb | acb) -> bool | None:
+    """Whether a number is zero; None where the present working precision can't tell.
+
+    A ball that still holds zero at 2048 bits is taken as zero: two descriptions that coincide.
+    """
+    if is_exactly_zero(value):
+        return True
+    if not value.contains(0):
+        return False
+    return True if ctx.prec >= COINCIDENCE_BITS else None
 
 
 def decided_sign(compute: Callable[[], arb], what: str) -> int:

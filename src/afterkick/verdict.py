@@ -5,11 +5,11 @@ from functools import cached_property
 from attrs import frozen
 from flint import fmpq
 
+from afterkick.design.digest import digest
 from afterkick.design.schema import Design
 from afterkick.fixed.direct import direct_program
 from afterkick.fixed.program import Program, quantised_dc_gain
 from afterkick.fixed.realised import realised
-from afterkick.design.digest import digest
 from afterkick.model.forms import model_of
 from afterkick.model.model import Model
 from afterkick.numbers import fraction
@@ -74,9 +74,7 @@ def assess(design: Design) -> Assessment:
     sampled = sample(model, design.sampling)
     name = design.design.name
     mark = digest(design)
-    program = direct_program(
-        sampled, design.arithmetic, design.signals, name, title=design.design.title, digest=mark
-    )
+    program = direct_program(sampled, design.arithmetic, design.signals, name, title=design.design.title, digest=mark)
     errors = response_errors(sampled, design.budget.band_hz)
     shipped = response_errors(realised(program, sampled), design.budget.band_hz)
     return Assessment(
@@ -94,20 +92,40 @@ def assess(design: Design) -> Assessment:
 
 def _budget_lines(design: Design, model: Model, shipped: ResponseErrors) -> list[BudgetLine]:
     """The lines that the file gives, in the order of DESIGN's table; the shipped integers are judged."""
-    impulse, band = shipped.impulse, shipped.band
-    late = f"{100 * impulse.peak_aligned:.2g} % with a delay of {impulse.delay_samples:.3g} samples taken out"
+    band = shipped.band
     found: dict[str, tuple[float | None, str]] = {
-        "impulse_peak_percent": (100 * impulse.peak, late),
-        "impulse_rms_percent": (100 * impulse.rms, ""),
-        "magnitude_db": (abs(band.magnitude_db), f"largest at {band.magnitude_at_hz:.4g} Hz"),
-        "phase_deg": (abs(band.phase_deg), f"largest at {band.phase_at_hz:.4g} Hz"),
+        **_impulse_figures(shipped),
+        "magnitude_db": _largest(band.magnitude_db, band.magnitude_at_hz),
+        "phase_deg": _largest(band.phase_deg, band.phase_at_hz),
         "dc_gain_ppm": _dc_gain_ppm(model, shipped),
     }
-    found |= {item: (None, "not supported yet") for item in _LATER}
+    found |= dict.fromkeys(_LATER, (None, "not supported yet"))
     limits = {item: getattr(design.budget, item) for item in found}
     return [
         BudgetLine(item, float(fraction(limit)), *found[item]) for item, limit in limits.items() if limit is not None
     ]
+
+
+def _impulse_figures(shipped: ResponseErrors) -> dict[str, tuple[float | None, str]]:
+    impulse = shipped.impulse
+    if impulse is None:
+        improper = "an improper model has no impulse response to compare with"
+        return {"impulse_peak_percent": (None, improper), "impulse_rms_percent": (None, improper)}
+    peak, rms, aligned = (
+        None if value is None else 100 * value for value in (impulse.peak, impulse.rms, impulse.peak_aligned)
+    )
+    nothing = "the analytic response is zero at every sample"
+    late = "" if aligned is None else f"{aligned:.2g} % apart from a delay of {impulse.delay_samples:.3g} T"
+    return {
+        "impulse_peak_percent": (peak, nothing if peak is None else late),
+        "impulse_rms_percent": (rms, nothing if rms is None else ""),
+    }
+
+
+def _largest(value: float | None, at_hz: float | None) -> tuple[float | None, str]:
+    if value is None:
+        return None, "no frequency of the band has a figure"
+    return abs(value), f"largest at {at_hz:.4g} Hz"
 
 
 def _dc_gain_ppm(model: Model, shipped: ResponseErrors) -> tuple[float | None, str]:

@@ -1,21 +1,50 @@
 """Mutated design files: reading one gives a Design or its problems, never another exception.
 
 python tests/design/fuzz_designs.py --count 20000 --seed 1
+
+With ``--through check`` what was read walks on through the whole road: judged, printed, put into JSON, printed as C; one
+text in twenty also through the command line.  A design may be refused anywhere on the road, but in no other way than
+by the package's own errors, in reasonable time, and without a file left behind.
 """
 
 import argparse
+import json
 import random
 import re
+import signal
+import warnings
+from collections import Counter
 from collections.abc import Callable, Iterator
+from contextlib import contextmanager
 from pathlib import Path
+from tempfile import TemporaryDirectory
+from time import monotonic
+from types import FrameType
 
+from click.testing import CliRunner
+
+from afterkick.cli import main as command_line
+from afterkick.cli.common import LACKING
 from afterkick.design import Design, read_design
 from afterkick.design.schema import BLOCK_TYPES, FAMILIES, METHODS
-from afterkick.errors import Refused
+from afterkick.emit import emit_c
+from afterkick.errors import Lacking, Refused, Uncertified
+from afterkick.report.data import check_data
+from afterkick.report.notes import emitted_notes
+from afterkick.report.text import check_text
+from afterkick.starters import STARTERS, starter_text
+from afterkick.verdict import assess
 
-__all__ = ["judge", "mutations"]
+__all__ = ["TIME_LIMIT_S", "judge", "mutations", "through_command_line", "time_limit", "walk"]
 
 GOOD = [path.read_text("utf-8") for path in sorted((Path(__file__).parent / "good").glob("*.toml"))]
+GOOD += [starter_text(starter) for starter in STARTERS]
+
+TIME_LIMIT_S = 20
+"""For one design: more would let a file stop a build."""
+SLOW_S = 3.0
+COMMAND_LINE_SHARE = 20
+EMITTED_FILES = 4
 
 TOKEN = re.compile(r'"[^"\n]*"|[\w.+-]+|\s+|[^\w\s]')
 NUMBER = re.compile(r"(?<![\w.])-?\d[\d.e+-]*")
@@ -82,6 +111,78 @@ def judge(text: str) -> bool:
         assert len(str(problem)) < 2000, "a message of more than a screen"
         assert str(problem).isprintable(), "a message that a terminal can't show"
     return False
+
+
+def walk(text: str) -> str:
+    """The whole road, and how it ended: ``unreadable``, ``refused``, ``uncertified``, ``lacking`` or a verdict."""
+    try:
+        design = read_design(text)
+    except Refused:
+        return "unreadable"
+    try:
+        found = assess(design)
+        shown = check_text(found)
+        json.dumps(check_data(found), allow_nan=False)
+        files = emit_c(found.program, notes=emitted_notes(found))
+    except Refused as refusal:
+        assert all((problem.where, problem.found, problem.accepted) for problem in refusal.problems)
+        assert str(refusal).replace("\n", "").isprintable(), "a message that a terminal can't show"
+        assert all(len(str(problem)) < 2000 for problem in refusal.problems), "a message of more than a screen"
+        return "refused"
+    except (Uncertified, Lacking) as error:
+        return type(error).__name__.lower()
+    assert len(files) == EMITTED_FILES
+    unfit = [line for line in shown.split("\n")[1:] if not line.isprintable() or re.search(r"\b(nan|inf)\b", line)]
+    assert not unfit, unfit
+    return found.verdict
+
+
+def through_command_line(text: str, folder: Path) -> int:
+    """``check --json`` and ``emit`` on a file with this text: exit codes agree with what is printed and written."""
+    path, output = folder / "mutated.toml", folder / "emitted"
+    path.write_bytes(text.encode("utf-8", "surrogatepass"))
+    checked = CliRunner().invoke(command_line, ["check", "--json", str(path)])
+    _well_behaved(checked.exception)
+    assert 0 <= checked.exit_code <= LACKING
+    if checked.exit_code <= 1:
+        assert isinstance(json.loads(checked.stdout, parse_constant=_no_constant), dict)
+    else:
+        assert checked.stdout == ""
+        assert checked.stderr
+    emitted = CliRunner().invoke(command_line, ["emit", str(path), "-o", str(output)])
+    _well_behaved(emitted.exception)
+    written = sorted(file.name for file in output.iterdir()) if output.exists() else []
+    if emitted.exit_code == 0:
+        assert len(written) == EMITTED_FILES, written
+        assert not [name for name in written if name.startswith(".")]
+    else:
+        assert not output.exists(), "emit left something behind"
+    return checked.exit_code
+
+
+def _well_behaved(exception: BaseException | None) -> None:
+    if exception is not None and not isinstance(exception, SystemExit):
+        raise exception
+
+
+def _no_constant(name: str) -> None:
+    raise AssertionError(f"{name} in JSON")
+
+
+@contextmanager
+def time_limit(seconds: int) -> Iterator[None]:
+    """Raises TimeoutError in the block once the time is over."""
+
+    def over(number: int, frame: FrameType | None) -> None:
+        raise TimeoutError(f"more than {seconds} s")
+
+    before = signal.signal(signal.SIGALRM, over)
+    signal.alarm(seconds)
+    try:
+        yield
+    finally:
+        signal.alarm(0)
+        signal.signal(signal.SIGALRM, before)
 
 
 def _swap_tokens(chance: random.Random, text: str) -> str:
@@ -191,18 +292,43 @@ CHANGES: list[Callable[[random.Random, str], str]] = [
 
 
 def main() -> None:
-    parser = argparse.ArgumentParser(description=__doc__)
+    parser = argparse.ArgumentParser(description=__doc__, formatter_class=argparse.RawDescriptionHelpFormatter)
     parser.add_argument("--count", type=int, default=20000)
     parser.add_argument("--seed", type=int, default=1)
+    parser.add_argument("--through", choices=("read", "check"), default="read")
+    parser.add_argument("--keep-going", action="store_true", help="print what fails and go on")
     options = parser.parse_args()
-    accepted = 0
+    warnings.simplefilter("error")
+    outcomes: Counter[str] = Counter()
+    failures = 0
     for number, text in enumerate(mutations(options.seed, options.count)):
+        start = monotonic()
         try:
-            accepted += judge(text)
-        except Exception:
-            print(f"seed {options.seed}, text {number}:\n{text!r}")
-            raise
-    print(f"{options.count} mutated designs, seed {options.seed}: {accepted} read, {options.count - accepted} refused")
+            with time_limit(TIME_LIMIT_S):
+                outcome = _outcome(text, number, options.through)
+        except Exception as error:
+            failures += 1
+            print(f"seed {options.seed}, text {number}: {type(error).__name__}: {error}\n{text!r}", flush=True)
+            if not options.keep_going:
+                raise
+            continue
+        outcomes[outcome] += 1
+        seconds = monotonic() - start
+        if outcome == "uncertified" or seconds > SLOW_S:
+            print(f"seed {options.seed}, text {number}: {outcome} after {seconds:.1f} s\n{text!r}", flush=True)
+    ends = ", ".join(f"{times} {outcome}" for outcome, times in sorted(outcomes.items()))
+    print(f"{options.count} mutated designs, seed {options.seed}: {ends}; {failures} failures")
+    raise SystemExit(failures > 0)
+
+
+def _outcome(text: str, number: int, through: str) -> str:
+    readable = judge(text)
+    if through == "read":
+        return "read" if readable else "unreadable"
+    if number % COMMAND_LINE_SHARE == 0:
+        with TemporaryDirectory() as folder:
+            through_command_line(text, Path(folder))
+    return walk(text)
 
 
 if __name__ == "__main__":

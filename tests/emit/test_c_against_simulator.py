@@ -54,8 +54,8 @@ static void answer(int32_t value)
 # Step over all samples into one half of the answer, run in place over blocks, a block of none among them, into the
 # other; then the self-test.
 DRIVER_PART = """
-#include "{name}.h"
-#include "{name}_selftest.h"
+#include "{name}.c"
+#include "{name}_selftest.c"
 static {type} {name}_codes[{length}];
 static void {name}_drive(void)
 {{
@@ -98,20 +98,20 @@ def call(command: list[str], folder: Path, **options) -> bytes:
     return done.stdout
 
 
-def build(compiler: str, sources: list[str], folder: Path) -> None:
-    """Every source on its own, warnings as errors, linked into ``probe``."""
-    if compiler in ("gcc", "zig cc"):
-        command = ["gcc"] if compiler == "gcc" else [*ZIG, "cc"]
-        call([*command, "-std=c99", "-O1", *WARNINGS, *SANITIZER, *sources, "-o", "probe"], folder)
-    elif compiler == "g++":
-        call(["g++", "-std=c++17", "-O1", *WARNINGS, *SANITIZER, "-x", "c++", *sources, "-o", "probe"], folder)
-    else:
-        # Linked as C: building the C++ runtime would take minutes, and the code needs none of it.
-        objects = [f"{source}.o" for source in sources]
-        flags = ["-std=c++17", "-O1", "-fno-exceptions", "-fno-rtti", *WARNINGS, *SANITIZER]
-        for source, output in zip(sources, objects, strict=True):
-            call([*ZIG, "c++", *flags, "-x", "c++", "-c", source, "-o", output], folder)
-        call([*ZIG, "cc", *SANITIZER, *objects, "-o", "probe"], folder)
+COMMANDS = {
+    "gcc": ["gcc", "-std=c99"],
+    "g++": ["g++", "-std=c++17", "-x", "c++"],
+    "zig cc": [*ZIG, "cc", "-std=c99"],
+    "zig c++": [*ZIG, "c++", "-std=c++17", "-x", "c++", "-fno-exceptions", "-fno-rtti"],
+}
+
+
+def build(compiler: str, folder: Path) -> None:
+    """driver.c, which includes all the sources, as ``probe``: warnings as errors."""
+    call([*COMMANDS[compiler], "-O1", *WARNINGS, *SANITIZER, "-c", "driver.c", "-o", "driver.o"], folder)
+    # C++ of the wheel is linked as C: building its C++ runtime would take minutes, and the code needs none of it.
+    linker = [*ZIG, "cc"] if compiler.startswith("zig") else COMMANDS[compiler][:1]
+    call([*linker, *SANITIZER, "driver.o", "-o", "probe"], folder)
 
 
 @functools.cache
@@ -121,13 +121,11 @@ def programs_of(seeds: tuple[int, ...]) -> list[Program]:
 
 def compare(compiler: str, seeds: list[int], programs: list[Program], folder: Path) -> None:
     inputs = [random_codes(program, seed) for program, seed in zip(programs, seeds, strict=True)]
-    sources = []
     for program in programs:
         for name, text in emit_c(program).items():
             (folder / name).write_text(text, encoding="ascii")
-            sources += [name] if name.endswith(".c") else []
     (folder / "driver.c").write_text(driver(programs, [len(codes) for codes in inputs]))
-    build(compiler, ["driver.c", *sources], folder)
+    build(compiler, folder)
     output = call(["./probe"], folder, input=np.concatenate(inputs).astype(np.int32).tobytes())
     answers = np.frombuffer(output, dtype=np.int32)
     for seed, program, codes in zip(seeds, programs, inputs, strict=True):

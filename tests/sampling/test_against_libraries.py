@@ -48,13 +48,19 @@ def agree(found: np.ndarray, expected: np.ndarray) -> None:
     assert found == pytest.approx(expected, rel=0, abs=2e-11 * np.abs(expected).max())
 
 
-@pytest.mark.parametrize("method", METHODS)
-@pytest.mark.parametrize("name", CASES)
+# The library's impulse rule has no feedthrough.
+PAIRS = [
+    (name, method)
+    for name, (top, bottom, _) in CASES.items()
+    for method in METHODS
+    if method != "impulse-invariant" or len(top) < len(bottom)
+]
+
+
+@pytest.mark.parametrize(("name", "method"), PAIRS)
 def test_scipy_cont2discrete(name: str, method: str) -> None:
-    """scipy.signal.cont2discrete; its impulse method keeps the whole h(0+) and can't take feedthrough."""
+    """scipy.signal.cont2discrete; its impulse method keeps the whole h(0+)."""
     numerator, denominator, rate = CASES[name]
-    if method == "impulse-invariant" and len(numerator) == len(denominator):
-        pytest.skip("the library rejects feedthrough here")
     system = ([float(x) for x in numerator], [float(x) for x in denominator])
     b, a, _ = scipy.signal.cont2discrete(system, 1 / float(rate), method=METHODS[method])
     options = {"first_sample": "full"} if method == "impulse-invariant" else {}

@@ -49,5 +49,3 @@ def _amplitude(text: str) -> fmpq:
     except InvalidOperation:
         pass
     raise Refused(Problem("--amplitude", text[:40], "a positive decimal number, in input units"))
-
-

@@ -16,7 +16,9 @@ _KINDS = "; ".join(f"{name}: {what}" for name, what in STARTERS.items())
 @click.command("new", help=f"Write NAME.toml, a commented starter design. Starters: {_KINDS}.")
 @click.argument("name")
 @click.option("--starter", type=click.Choice(list(STARTERS)), default="slam", show_default=True)
-@click.option("-o", "--output", "folder", type=click.Path(path_type=Path), default=Path("."), help="Folder to write to.")
+@click.option(
+    "-o", "--output", "folder", type=click.Path(path_type=Path), default=Path("."), help="Folder to write to."
+)
 def command(name: str, starter: str, folder: Path) -> None:
     """Never overwrites."""
     with reported("new") as codes:

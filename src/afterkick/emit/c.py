@@ -49,10 +49,8 @@ def emit_c(program: Program, *, notes: tuple[str, ...] = (), templates: Path | N
         except Exception as error:  # a template is a program of the user's own: it can raise anything
             if templates is None:
                 raise
-            where = f"template {LANGUAGE}/{template}"
-            raise Refused(
-                Problem(where, f"{type(error).__name__}: {error}", "a template that renders", "correct the template")
-            ) from error
+            where, found = f"template {LANGUAGE}/{template}", f"{type(error).__name__}: {error}"
+            raise Refused(Problem(where, found, "a template that renders", "correct the template")) from error
     return files
 
 

@@ -7,7 +7,7 @@ from flint import acb, arb, fmpq, fmpq_poly
 
 from afterkick.errors import Problem, Refused
 from afterkick.model.factors import Factors, Gain
-from afterkick.model.partial_fractions import Mode, expand, product_taylor
+from afterkick.model.partial_fractions import Mode, expand, polynomial_taylor, product_taylor
 from afterkick.model.roots import (
     RADIANS,
     ZERO,
@@ -43,18 +43,8 @@ class FreeResponse:
 
     def modes(self) -> tuple[Mode, ...]:
         """The modes at the present working precision."""
-        return expand(self._taylor, [(root.evaluate(), root.real, times) for root, times in self.poles.items()])
-
-    def _taylor(self, point: acb, terms: int) -> list[acb]:
-        series, derivative, factorial = [], self.numerator, 1
-        for j in range(terms):
-            factorial *= max(j, 1)
-            total = acb(0)
-            for coefficient in reversed(derivative.coeffs()):
-                total = total * point + arb(coefficient)
-            series.append(total / factorial)
-            derivative = derivative.derivative()
-        return series
+        poles = [(root.evaluate(), root.real, times) for root, times in self.poles.items()]
+        return expand(polynomial_taylor(self.numerator), poles)
 
 
 @frozen

@@ -7,9 +7,9 @@ working precision, which the caller raises until the result is accurate enough.
 from collections.abc import Callable, Sequence
 
 from attrs import frozen
-from flint import acb, arb, fmpq
+from flint import acb, arb, fmpq, fmpq_poly
 
-__all__ = ["Mode", "evaluate", "expand", "product_taylor"]
+__all__ = ["Mode", "evaluate", "expand", "polynomial_taylor", "product_taylor"]
 
 
 @frozen
@@ -43,6 +43,23 @@ def product_taylor(gain: arb, zeros: Sequence[tuple[acb, int]]) -> Callable[[acb
         for zero, times in zeros:
             for _ in range(times):
                 series = _times_linear(series, point - zero)
+        return series
+
+    return taylor
+
+
+def polynomial_taylor(polynomial: fmpq_poly) -> Callable[[acb, int], list[acb]]:
+    """Taylor coefficients of a rational polynomial about any point."""
+
+    def taylor(point: acb, terms: int) -> list[acb]:
+        series, derivative, factorial = [], polynomial, 1
+        for j in range(terms):
+            factorial *= max(j, 1)
+            total = acb(0)
+            for coefficient in reversed(derivative.coeffs()):
+                total = total * point + arb(coefficient)
+            series.append(total / factorial)
+            derivative = derivative.derivative()
         return series
 
     return taylor

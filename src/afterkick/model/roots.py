@@ -16,7 +16,7 @@ from attrs import field, frozen
 from flint import acb, arb, ctx, fmpq, fmpq_poly, fmpz_poly
 
 from afterkick.errors import Problem, Refused, Uncertified
-from afterkick.numbers import LOWEST_BITS, certified, decided_sign, mid_float, working_bits
+from afterkick.numbers import LOWEST_BITS, decided_sign, mid_float, working_bits
 
 __all__ = [
     "HERTZ",
@@ -27,7 +27,6 @@ __all__ = [
     "algebraic_roots",
     "cancel",
     "count",
-    "identified",
     "merged",
     "quadratic_roots",
     "refuse_undecided",
@@ -210,17 +209,6 @@ def _first_isolation(coefficients: tuple[int, ...]) -> tuple[acb, ...]:
     """The balls that name each root: at 128 bits whatever the caller's precision, so that an index never changes."""
     with working_bits(LOWEST_BITS):
         return _isolated(coefficients, LOWEST_BITS)
-
-
-def identified(evaluate: Callable[[], acb], annihilator: fmpq_poly, unit: str) -> Root:
-    """The algebraic root that ``evaluate`` (in ``unit``, imaginary part >= 0) gives; ``annihilator`` vanishes there."""
-    candidates = list(algebraic_roots(annihilator, unit))
-
-    def near() -> list[Root]:
-        value = evaluate() * _scale(unit)
-        return [root for root in candidates if root.evaluate().overlaps(value)]
-
-    return certified(near, lambda found: len(found) == 1, "a root of a known polynomial")[0]
 
 
 def quadratic_roots(coefficients: Callable[[], tuple[arb, arb, arb]], key: tuple[Hashable, ...]) -> dict[Root, int]:

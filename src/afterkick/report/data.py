@@ -1,5 +1,6 @@
 """What ``check`` and ``kick`` found as plain data, ready for JSON."""
 
+from math import isfinite
 from typing import Any
 
 from attrs import asdict
@@ -11,9 +12,9 @@ from afterkick.model.model import Model
 from afterkick.model.roots import Roots
 from afterkick.numbers import fraction, mid_float, to_text, working_bits
 from afterkick.report.formulas import closed_form
+from afterkick.report.response import Kick
 from afterkick.sampling.response_errors import CONVENTION, ResponseErrors
 from afterkick.sampling.sampled import Sampled
-from afterkick.report.response import Kick
 from afterkick.verdict import Assessment
 
 __all__ = ["REPORT_BITS", "check_data", "kick_data"]
@@ -25,7 +26,7 @@ REPORT_BITS = 80
 def check_data(found: Assessment) -> dict[str, Any]:
     """One JSON object; ``b`` and ``a`` carry 17 significant digits, a[0] = 1."""
     design = found.design
-    return {
+    data = {
         "design": design.design.name,
         "title": design.design.title,
         "digest": found.digest,
@@ -41,6 +42,20 @@ def check_data(found: Assessment) -> dict[str, Any]:
             for line in found.budget
         ],
     }
+    return {key: _finite(value) for key, value in data.items()}
+
+
+def _finite(value: Any) -> Any:
+    """Null where a figure is no finite number, as JSON has no word for it."""
+    match value:
+        case float():
+            return value if isfinite(value) else None
+        case dict():
+            return {key: _finite(item) for key, item in value.items()}
+        case list() | tuple():
+            return [_finite(item) for item in value]
+        case _:
+            return value
 
 
 def _roots_data(roots: Roots) -> list[dict[str, Any]]:
@@ -144,7 +159,7 @@ def kick_data(design: Design, rows: Kick) -> dict[str, Any]:
     """The columns of ``kick`` as rows."""
     columns = (rows.n.tolist(), rows.t.tolist(), rows.analytic.tolist(), rows.sampled.tolist(), rows.integer.tolist())
     names = ("n", "t", "analytic", "sampled", "integer", "counts")
-    return {
+    data = {
         "design": design.design.name,
         "rate_hz": float(fraction(design.sampling.rate_hz)),
         "method": design.sampling.method,
@@ -153,3 +168,4 @@ def kick_data(design: Design, rows: Kick) -> dict[str, Any]:
         "amplitude_counts": rows.amplitude_counts,
         "rows": [dict(zip(names, row, strict=True)) for row in zip(*columns, rows.counts.tolist(), strict=True)],
     }
+    return {key: _finite(value) for key, value in data.items()}

@@ -1,18 +1,26 @@
 """Closed forms and numbers as a reader would write them."""
 
 from collections.abc import Sequence
+from math import isfinite
 
 from flint import arb, fmpq
 
 from afterkick.model.partial_fractions import Mode
-from afterkick.numbers import fraction, mid_float
+from afterkick.numbers import fraction, mid_float, to_text
 
-__all__ = ["closed_form", "exact_text", "number"]
+__all__ = ["ball_text", "closed_form", "exact_text", "number"]
 
 
 def number(value: float, digits: int = 6) -> str:
     """A float in as few characters as its digits allow."""
-    return f"{value:.{digits}g}"
+    return f"{value + 0.0:.{digits}g}"  # -0.0 + 0.0 is 0.0
+
+
+def ball_text(value: arb, digits: int = 6) -> str:
+    """A ball's midpoint, also where no float can hold it."""
+    middle = mid_float(value)
+    fits = isfinite(middle) and (middle != 0.0 or bool(value.mid().is_zero()))
+    return number(middle, digits) if fits else to_text(value, digits)
 
 
 def exact_text(value: fmpq) -> str:
@@ -26,7 +34,7 @@ def exact_text(value: fmpq) -> str:
 
 def closed_form(modes: Sequence[Mode], dirac: arb, variable: str = "t") -> str:
     """sum of t^j e^(-at) (A cos wt + B sin wt), six digits; the Dirac part first."""
-    terms = [] if dirac.is_zero() else [f"{number(mid_float(dirac))} δ({variable})"]
+    terms = [] if dirac.is_zero() else [f"{ball_text(dirac)} δ({variable})"]
     for mode in modes:
         factorial = 1
         for j, coefficient in enumerate(mode.coefficients):
@@ -36,15 +44,15 @@ def closed_form(modes: Sequence[Mode], dirac: arb, variable: str = "t") -> str:
 
 
 def _mode_terms(mode: Mode, power: int, re: arb, im: arb, variable: str) -> list[str]:
-    decay = "" if mode.pole.real.is_zero() else f"e^({number(mid_float(mode.pole.real))} {variable})"
+    decay = "" if mode.pole.real.is_zero() else f"e^({ball_text(mode.pole.real)} {variable})"
     growth = "" if power == 0 else variable if power == 1 else f"{variable}^{power}"
     if mode.real:
         factors = [(re, "")]
     else:
-        turn = f"{number(mid_float(mode.pole.imag))} {variable}"
+        turn = f"{ball_text(mode.pole.imag)} {variable}"
         factors = [(2 * re, f"cos({turn})"), (-2 * im, f"sin({turn})")]
     return [
-        " ".join(part for part in (number(mid_float(amplitude)), growth, decay, wave) if part)
+        " ".join(part for part in (ball_text(amplitude), growth, decay, wave) if part)
         for amplitude, wave in factors
         if not amplitude.contains(0)
     ]

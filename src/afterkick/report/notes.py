@@ -9,14 +9,17 @@ __all__ = ["emitted_notes"]
 def emitted_notes(found: Assessment) -> tuple[str, ...]:
     """A few lines; figures to three digits, so that they change only when the filter does."""
     shipped, model = found.shipped, found.model
+    impulse, band = shipped.impulse, shipped.band
     lines = [
         f"Model: order {model.order}, {model.stability}; sampled by {found.sampled.method}.",
         "Against the continuous model, output rounding left out (estimates):",
-        f"  impulse response: peak {number(100 * shipped.impulse.peak, 3)} %, "
-        f"r.m.s. {number(100 * shipped.impulse.rms, 3)} % of the analytic one;",
-        f"  up to {number(shipped.band.up_to_hz)} Hz: {number(abs(shipped.band.magnitude_db), 3)} dB, "
-        f"{number(abs(shipped.band.phase_deg), 3)} degrees.",
     ]
+    if impulse is not None and impulse.peak is not None and impulse.rms is not None:
+        peak, rms = number(100 * impulse.peak, 3), number(100 * impulse.rms, 3)
+        lines.append(f"  impulse response: peak {peak} %, r.m.s. {rms} % of the analytic one;")
+    if band.magnitude_db is not None and band.phase_deg is not None:
+        magnitude, phase = number(abs(band.magnitude_db), 3), number(abs(band.phase_deg), 3)
+        lines.append(f"  up to {number(band.up_to_hz)} Hz: {magnitude} dB, {phase} degrees.")
     if shipped.dc_gain_relative is not None:
         lines.append(f"  gain at 0 Hz: {number(1e6 * shipped.dc_gain_relative, 3)} ppm off.")
     lines.append(f"Budget of the design file: {found.verdict}.")

@@ -67,14 +67,14 @@ def kick(model: Model, sampled: Sampled, program: Program, samples: int, amplitu
     late = sampled.delay_samples
     if sampled.fraction_s == 0 and late < samples:
         discrete[late] -= dirac
-    integer = counts * unit
+    integer = counts.astype(np.float64) * unit
     if sampled.fraction_s == 0 and late < samples:
         integer[late] -= dirac
     return Kick(
         code,
         dirac,
         indices,
-        indices * period,
+        indices.astype(np.float64) * period,
         analytic,
         discrete / period,
         integer / period,

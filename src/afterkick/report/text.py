@@ -11,7 +11,8 @@ from afterkick.model.model import Model
 from afterkick.model.roots import Roots
 from afterkick.numbers import fraction, mid_float, to_text, working_bits
 from afterkick.report.data import REPORT_BITS
-from afterkick.report.formulas import closed_form, exact_text, number
+from afterkick.report.formulas import ball_text, closed_form, exact_text, number
+from afterkick.report.layout import LABEL, row
 from afterkick.report.response import Kick
 from afterkick.sampling.response_errors import CONVENTION, ResponseErrors
 from afterkick.targets import TargetProfile
@@ -19,14 +20,29 @@ from afterkick.verdict import Assessment, BudgetLine
 
 __all__ = ["check_text", "headline", "kick_text", "targets_text", "tour_text"]
 
-_LABEL = 12
+_NOISE_PERCENT = 1e-9
+"""Below this a figure is the rounding of double precision."""
 
 
 def headline(found: Assessment) -> str:
-    """Name, title and verdict on one line."""
+    """Name, title and verdict on one line; what falls short is named."""
     identity = found.design.design
     title = f" ({identity.title})" if identity.title != identity.name else ""
-    return f"{identity.name}{title}: {found.verdict.upper() if found.verdict != 'holds' else 'holds'}"
+    return f"{identity.name}{title}: {_verdict_text(found)}"
+
+
+def _verdict_text(found: Assessment) -> str:
+    reasons = [line.item for line in found.budget if line.holds is False]
+    if found.model.stability == "unstable":
+        reasons.append("the model is unstable")
+    match found.verdict:
+        case "holds":
+            return "holds" if found.budget else "holds, as no budget is given"
+        case "falls short":
+            return f"FALLS SHORT: {', '.join(reasons)}"
+        case verdict:
+            unjudged = ", ".join(line.item for line in found.budget if line.holds is None)
+            return f"{verdict.upper()}: {unjudged} not judged"
 
 
 def check_text(found: Assessment) -> str:
@@ -34,35 +50,34 @@ def check_text(found: Assessment) -> str:
     lines = [headline(found), ""]
     lines += _model_lines(found) + _sampling_lines(found) + _fixed_lines(found) + _error_lines(found)
     lines += _budget_lines(found.budget)
-    lines += [f"{'warning':<{_LABEL}}{text}" for text in (*found.model.warnings, *found.sampled.warnings)]
+    lines += [row("warning", text) for text in (*found.model.warnings, *found.sampled.warnings)]
     return "\n".join(lines)
-
-
-def _row(label: str, text: str) -> str:
-    return f"{label:<{_LABEL}}{text}"
 
 
 def _model_lines(found: Assessment) -> list[str]:
     model, signals = found.model, found.design.signals
     dc_gain = model.dc_gain_ball()
-    gain = "integrates" if dc_gain is None else f"gain {number(mid_float(dc_gain))} at 0 Hz"
+    gain = "integrates" if dc_gain is None else f"gain {ball_text(dc_gain)} at 0 Hz"
     dead_time = f", dead time {exact_text(model.dead_time_s)} s" if model.dead_time_s != 0 else ""
-    lines = [_row("model", f"order {model.order}, {model.stability}, {gain}{dead_time}")]
-    lines += [_row("  poles", _roots_text(model.poles))]
+    lines = [row("model", f"order {model.order}, {model.stability}, {gain}{dead_time}")]
+    lines += [row("  poles", _roots_text(model.poles), formula=True)]
     if model.zeros:
-        lines += [_row("  zeros", _roots_text(model.zeros))]
+        lines += [row("  zeros", _roots_text(model.zeros), formula=True)]
     if model.cancelled:
-        lines += [_row("  cancelled", _roots_text(dict(model.cancelled)) + " (exactly, pole against zero)")]
-    if model.relative_degree < 0:
-        return [*lines, _row("  h(t)", "improper: more zeros than poles")]
+        named = _roots_text(dict(model.cancelled))
+        lines += [row("  cancelled", f"{named}, exactly: a pole against a zero", formula=True)]
     unit = _impulse_unit(signals.output.unit, signals.input.unit)
     shift = f", t counted from {exact_text(model.dead_time_s)} s" if model.dead_time_s != 0 else ""
     with working_bits(128):
-        lines += [_row("  h(t)", f"{closed_form(model.response_modes(), model.feedthrough())}  [{unit}]{shift}")]
+        smooth = f"{closed_form(model.response_modes(), model.feedthrough())} [{unit}]{shift}"
+        lines += [row("  h(t)", smooth, formula=True)]
+        if model.relative_degree < 0:
+            return [*lines, row("", "for t > 0; improper: at t = 0 there are derivatives of the Dirac impulse δ(t)")]
         if model.free is not None:
             free = closed_form(model.free.modes(), arb(0))
-            lines += [_row("  free", f"y(t) = {free}  [{signals.output.unit or '1'}], from the values before 0")]
-    return lines + [_row("  at t = 0", _jumps_text(model))]
+            text = f"y(t) = {free} [{signals.output.unit or '1'}], from the values before 0"
+            lines += [row("  free", text, formula=True)]
+    return [*lines, row("  at t = 0", _jumps_text(model), formula=True)]
 
 
 def _impulse_unit(output: str, input_: str) -> str:
@@ -79,21 +94,24 @@ def _jumps_text(model: Model) -> str:
     jumps = model.markov_parameters(model.order)[1:]
     parts = []
     for i, jump in enumerate(jumps):
-        before = float(fraction(model.before[i])) if i < len(model.before) else 0.0
-        if before or not jump.is_zero():
-            mark = "y" + "'" * i if i < 4 else f"y^({i})"
-            parts.append(f"{mark} {number(before)} to {number(before + mid_float(jump))}")
-    return "a unit-area impulse moves " + ", ".join(parts[:4]) + (" ..." if len(parts) > 4 else "")
+        before = arb(model.before[i]) if i < len(model.before) else arb(0)
+        mark = "y" + "'" * i if i < 4 else f"y^({i})"
+        if not jump.is_zero():
+            parts.append(f"{mark} from {ball_text(before)} to {ball_text(before + jump)}")
+        elif not before.is_zero():
+            parts.append(f"{mark} stays {ball_text(before)}")
+    return "with a unit-area impulse " + ", ".join(parts[:4]) + (" ..." if len(parts) > 4 else "")
 
 
 def _sampling_lines(found: Assessment) -> list[str]:
     sampled = found.sampled
     delay = f", {sampled.delay_samples} samples of delay" if sampled.delay_samples else ""
     state = "" if sampled.stable else ", marginal" if sampled.marginal else ", UNSTABLE"
-    lines = [_row("sampling", f"{sampled.method} at {exact_text(sampled.rate_hz)} Hz{delay}{state}")]
+    lines = [row("sampling", f"{sampled.method} at {exact_text(sampled.rate_hz)} Hz{delay}{state}")]
     for k, section in enumerate(sampled.sections(REPORT_BITS), start=1):
         b, a = (", ".join(_short(value) for value in group) for group in (section.b, section.a))
-        lines.append(_row(f"  section {k}", f"b {b};  a {a};  1+a1+a2 {_short(section.a_at_one)}"))
+        text = f"b ({b}); a ({a}); 1+a1+a2 {_short(section.a_at_one)}"
+        lines.append(row(f"  section {k}", text, formula=True))
     return lines
 
 
@@ -104,65 +122,73 @@ def _short(value: arb) -> str:
 
 def _fixed_lines(found: Assessment) -> list[str]:
     program = found.program
-    lines = [
-        _row(
-            "integers",
-            f"{program.structure}, {program.data_bits}-bit data, {program.coefficient_bits}-bit coefficients, "
-            f"round to {program.rounding.value}, {program.overflow.value}"
-            if program.rounding.value != "floor"
-            else f"{program.structure}, {program.data_bits}-bit data, {program.coefficient_bits}-bit coefficients, "
-            f"floor, {program.overflow.value}",
-        )
-    ]
-    return lines + [_row(f"  section {k}", _integers(section)) for k, section in enumerate(program.sections, start=1)]
+    rounding = "floor" if program.rounding.value == "floor" else f"round to {program.rounding.value}"
+    words = f"{program.data_bits}-bit data, {program.coefficient_bits}-bit coefficients"
+    lines = [row("integers", f"{program.structure}, {words}, {rounding}, {program.overflow.value}")]
+    for k, section in enumerate(program.sections, start=1):
+        lines.append(row(f"  section {k}", _integers(section), formula=True))
+    return lines
 
 
 def _integers(section: ProgramSection) -> str:
     worst = max((abs(c.error_last_places) for c in section.coefficients), default=0.0)
-    return (
-        f"b {', '.join(map(str, section.b))} / 2^{section.b_fraction_bits};  "
-        f"a {', '.join(map(str, section.a))} / 2^{section.a_fraction_bits};  "
-        f"1+a1+a2 {sum(section.a)} last places"
-        + (f";  rounding up to {worst:.2f} last places" if worst > 0.5 else "")
-    )
+    b, a = (", ".join(map(str, group)) for group in (section.b, section.a))
+    text = f"b ({b}) / 2^{section.b_fraction_bits}; a ({a}) / 2^{section.a_fraction_bits}; 1+a1+a2 {sum(section.a)}"
+    return text + (f"; largest rounding {worst:.2f} last places" if worst > 0.5 else "")
 
 
 def _error_lines(found: Assessment) -> list[str]:
     exact, shipped = found.errors, found.shipped
     counts = 2 ** (found.program.data_bits - 1)
     peak = float(fraction(found.program.input_format.peak / found.program.output_format.full_scale)) * counts
-    lines = [
-        _row("errors", f"{'':<44}{'sampled exactly':>18}{'with the integers':>20}"),
-        _row("", f"(estimates: {CONVENTION})"),
-    ]
+    lines = [row("errors", f"{'':<40}{'sampled exactly':>20}{'with the integers':>22}")]
 
-    def row(label: str, pick: str, before: float | None, after: float | None, unit: str) -> None:
-        texts = ["unbounded" if value is None else f"{value:.4g} {unit}" for value in (before, after)]
-        lines.append(_row(f"  {label}", f"{pick:<44}{texts[0]:>18}{texts[1]:>20}"))
+    def add(label: str, pick: str, values: Iterable[float | None], unit: str, absent: str = "none") -> None:
+        texts = [absent if value is None else _figure(value, unit) for value in values]
+        lines.append(f"{label:<{LABEL}}{pick:<40}{texts[0]:>20}{texts[1]:>22}")
 
-    pair = (exact.impulse, shipped.impulse)
-    row("impulse", "peak", *(100 * e.peak for e in pair), "%")
-    row("", "r.m.s.", *(100 * e.rms for e in pair), "%")
-    row("", "area", *(100 * e.area for e in pair), "%")
-    row("", "best explained by a delay of", *(e.delay_samples for e in pair), "T")
-    row("", "peak that remains then", *(100 * e.peak_aligned for e in pair), "%")
-    row("step", "peak at the samples", 100 * exact.step.peak, 100 * shipped.step.peak, "%")
-    row("", "peak between them, output held", 100 * exact.step.between_samples, 100 * shipped.step.between_samples, "%")
-    at_samples = (exact.staircase_at_samples, shipped.staircase_at_samples)
-    row("staircase", "worst at the samples", *(v if v is None else v * peak for v in at_samples), "counts")
-    between = (exact.staircase_between_samples, shipped.staircase_between_samples)
-    row("", "worst between them, output held", *(v if v is None else v * peak for v in between), "counts")
-    row("gain", f"up to {number(exact.band.up_to_hz)} Hz", exact.band.magnitude_db, shipped.band.magnitude_db, "dB")
-    row("phase", f"up to {number(exact.band.up_to_hz)} Hz", exact.band.phase_deg, shipped.band.phase_deg, "deg")
+    if exact.impulse is not None and shipped.impulse is not None:
+        pair = (exact.impulse, shipped.impulse)
+        add("  impulse", "peak", (_percent(e.peak) for e in pair), "%")
+        add("", "r.m.s.", (_percent(e.rms) for e in pair), "%")
+        add("", "area", (_percent(e.area) for e in pair), "%")
+        add("", "best explained by a delay of", (e.delay_samples for e in pair), "T")
+        add("", "peak that remains then", (_percent(e.peak_aligned) for e in pair), "%")
+    else:
+        lines.append(row("  impulse", "an improper model has no impulse response to compare with"))
+    if exact.step is not None and shipped.step is not None:
+        steps = (exact.step, shipped.step)
+        add("  step", "peak at the samples", (_percent(e.peak) for e in steps), "%")
+        add("", "peak between them, output held", (_percent(e.between_samples) for e in steps), "%")
+    worst = [(e.staircase_at_samples, e.staircase_between_samples) for e in (exact, shipped)]
+    for label, pick, values in (
+        ("  staircase", "worst at the samples", (at for at, _ in worst)),
+        ("", "worst between them, output held", (between for _, between in worst)),
+    ):
+        add(label, pick, (value if value is None else value * peak for value in values), "counts", "no bound")
+    bands = (exact.band, shipped.band)
+    up_to = f"largest up to {number(exact.band.up_to_hz)} Hz"
+    add("  gain", up_to, (band.magnitude_db for band in bands), "dB")
     dc = [_ppm(errors) for errors in (exact, shipped)]
     if dc[0] is not None:
-        row("dc gain" if found.model.poles_at_origin == 0 else "growth", "", *dc, "ppm")
+        add("", "at 0 Hz" if found.model.poles_at_origin == 0 else "of the growth of an integrator", dc, "ppm")
+    add("  phase", up_to, (band.phase_deg for band in bands), "deg")
     for mode in exact.modes:
         if mode.analog_hz:
             before = f"{number(mode.analog_hz)} Hz, decay {number(mode.analog_decay_per_s)} /s"
             after = f"{number(mode.sampled_hz)} Hz, decay {number(mode.sampled_decay_per_s)} /s"
-            lines.append(_row("  mode", f"{before} is sampled as {after}"))
-    return lines
+            lines.append(row("  mode", f"{before} is sampled as {after}"))
+    return [*lines, row("", f"(estimates: {CONVENTION})")]
+
+
+def _percent(value: float | None) -> float | None:
+    return None if value is None else 100 * value
+
+
+def _figure(value: float, unit: str) -> str:
+    if unit == "%" and 0 < abs(value) < _NOISE_PERCENT:
+        return "< 1e-9 %"
+    return f"{number(value, 4)} {unit}"
 
 
 def _ppm(errors: ResponseErrors) -> float | None:
@@ -172,14 +198,14 @@ def _ppm(errors: ResponseErrors) -> float | None:
 
 def _budget_lines(budget: Sequence[BudgetLine]) -> list[str]:
     if not budget:
-        return [_row("budget", "none given: nothing is judged")]
+        return [row("budget", "none given: nothing is judged")]
     words = {True: "holds", False: "FALLS SHORT", None: "not judged"}
     lines = []
     for k, line in enumerate(budget):
         found = "" if line.found is None else f"{line.found:.4g}"
         remark = f"   ({line.remark})" if line.remark else ""
         text = f"{line.item:<24}{found:>12}  of {line.limit:<10.6g}{words[line.holds]}{remark}"
-        lines.append(_row("budget" if k == 0 else "", text))
+        lines.append(row("budget" if k == 0 else "", text))
     return lines
 
 
@@ -204,21 +230,28 @@ def tour_text(found: Assessment, stop: Mapping[str, Any], seconds: float) -> str
     with working_bits(128):
         form = closed_form(model.response_modes(), model.feedthrough())
     agreement = "equal integer for integer" if stop["equal"] else "DIFFERS from the simulator"
+    count = len(program.sections)
     lines = [
         headline(found),
-        _row("  model", f"order {model.order}; h(t) = {form}"),
-        _row("  sampled", f"{found.sampled.method} at {exact_text(found.sampled.rate_hz)} Hz, {_delay_text(found)}"),
-        _row(
+        row("  model", f"order {model.order}; h(t) = {form}", formula=True),
+        row("  sampled", f"{found.sampled.method} at {exact_text(found.sampled.rate_hz)} Hz, {_delay_text(found)}"),
+        row(
             "  integers",
             f"{program.data_bits}-bit data, {program.coefficient_bits}-bit coefficients, "
-            f"{len(program.sections)} section{'s' if len(program.sections) > 1 else ''}; impulse error "
-            f"{100 * shipped.impulse.peak:.3g} % peak, {100 * shipped.impulse.rms:.3g} % r.m.s.",
+            f"{count} section{'s' if count > 1 else ''}{_impulse_text(shipped)}",
         ),
-        _row("  C", f"{stop['c_lines']} lines; compiled by {stop['compiler']}; {stop['samples']} samples {agreement}"),
-        _row("  time", f"{seconds:.2f} s"),
+        row("  C", f"{stop['c_lines']} lines; compiled by {stop['compiler']}; {stop['samples']} samples {agreement}"),
+        row("  time", f"{seconds:.2f} s"),
         "",
     ]
     return "\n".join(lines)
+
+
+def _impulse_text(shipped: ResponseErrors) -> str:
+    impulse = shipped.impulse
+    if impulse is None or impulse.peak is None or impulse.rms is None:
+        return ""
+    return f"; impulse error {_figure(100 * impulse.peak, '%')} peak, {_figure(100 * impulse.rms, '%')} r.m.s."
 
 
 def _delay_text(found: Assessment) -> str:
@@ -227,10 +260,9 @@ def _delay_text(found: Assessment) -> str:
 
 
 def targets_text(profiles: Iterable[TargetProfile]) -> str:
-    """A table of profiles."""
-    lines = [f"{'name':<14}{'word':>5}{'int':>5}  {'products in one instruction':<58}title"]
-    lines += [
-        f"{p.name:<14}{p.word_bits:>5}{p.int_bits:>5}  {', '.join(p.multipliers) or 'none':<58}{p.title}"
-        for p in profiles
-    ]
+    """A table of profiles, the products of one instruction below each title."""
+    lines = [f"{'name':<14}{'word':>5}{'int':>5}  title and products of one instruction"]
+    for profile in profiles:
+        lines.append(f"{profile.name:<14}{profile.word_bits:>5}{profile.int_bits:>5}  {profile.title}")
+        lines.append(f"{'':<26}{', '.join(profile.multipliers) or 'no multiply instruction'}")
     return "\n".join(lines)

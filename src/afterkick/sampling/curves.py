@@ -129,8 +129,10 @@ def _usable(modes: Sequence[Mode]) -> bool:
 
 def _known(values: Sequence[arb]) -> bool:
     """Whether the radii are far below the largest value."""
-    peak = max((float(abs(value).mid()) for value in values), default=0.0)
-    return all(float(value.rad()) <= 2.0**-60 * peak for value in values)
+    peak = arb(0)
+    for value in values:
+        peak = peak.max(abs(value).lower())
+    return all(bool(value.rad() <= peak * arb(2) ** -60) for value in values)
 
 
 def _in_balls(compute: Callable[[], list[arb]], what: str) -> Floats:

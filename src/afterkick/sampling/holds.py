@@ -13,8 +13,10 @@ from collections.abc import Callable
 
 from flint import acb, arb, fmpq
 
+from afterkick.errors import Problem, Refused
 from afterkick.model.model import Model
 from afterkick.model.partial_fractions import evaluate
+from afterkick.numbers import vanishes
 from afterkick.sampling.pulse_transfer import PulseTransfer, ZRoot, expanded, exponential, real_polynomial_roots
 
 __all__ = ["INVARIANT_METHODS", "invariant_transfer", "pulse_response"]
@@ -54,7 +56,9 @@ def invariant_transfer(
 ) -> PulseTransfer | None:
     """The pulse transfer function: poles e^(pT), numerator from the first samples of g; None: more bits needed.
 
-    A dead time that is not a whole number of samples adds a pole at z = 0.
+    A dead time that is not a whole number of samples adds a pole at z = 0 to the holds.
+
+    :raises Refused: a rate at which all samples are zero.
     """
     pulse = pulse_response(model, method, period, fraction_s, first_sample)
     poles = tuple(exponential(root, period) for root, times in model.poles.items() for _ in range(times))
@@ -66,21 +70,35 @@ def invariant_transfer(
         for n in range(leading, last + 1)
     ]
     at_one = min(model.zeros_at_origin, {"zero-order-hold": 1, "first-order-hold": 2}.get(method, 0))
-    if len(numerator) - 1 < at_one or numerator[0].contains(0):
-        return None
     for _ in range(at_one):
         numerator = _without_one(numerator)
+    while numerator and vanishes(numerator[-1]):
+        numerator.pop()
+    while numerator and (first_is_zero := vanishes(numerator[0])):
+        numerator.pop(0)
+        leading += 1
+    if not numerator:
+        raise Refused(
+            Problem(
+                "sampling.rate_hz",
+                f"{method} at a rate where every sample of the response is zero",
+                "a rate at which the model's modes are seen",
+                "a rate well above twice the fastest mode",
+            )
+        )
+    if first_is_zero is None or vanishes(numerator[-1]) is None:
+        return None
     zeros = real_polynomial_roots(list(reversed(numerator)))
     if zeros is None:
         return None
-    if fraction_s != 0:
+    if fraction_s != 0 and method != "impulse-invariant":
         poles += (ZRoot(acb(0), True, name=0),)
     return PulseTransfer(numerator[0], leading, (ZRoot(acb(1), True),) * at_one + zeros, poles)
 
 
 def _extent(model: Model, method: str, fractional: bool, first_sample: str) -> tuple[int, int]:
     """The first and last power of 1/z in the numerator; the rest is exactly zero."""
-    last = model.order + (1 if fractional else 0)
+    last = model.order + (1 if fractional and method != "impulse-invariant" else 0)
     if method == "first-order-hold":
         return 0, last
     if method == "zero-order-hold":

@@ -11,14 +11,14 @@ from flint import acb, arb, fmpq
 
 from afterkick.model.model import Model
 from afterkick.model.roots import Root, Roots
-from afterkick.numbers import is_exactly_zero
+from afterkick.numbers import is_exactly_zero, vanishes
 from afterkick.sampling.pulse_transfer import PulseTransfer, ZRoot, exponential
 
 __all__ = ["backward_difference_transfer", "bilinear_constant", "bilinear_transfer", "matched_transfer"]
 
 
-Mapped = tuple[arb, ZRoot]
-"""(s - root), or the product over its conjugate pair, as scale * prod(1 - z_root/z)."""
+Mapped = tuple[arb, ZRoot | None]
+"""(s - root), or the product over its conjugate pair, as scale * prod(1 - z_root/z); None: scale / z."""
 
 
 def bilinear_constant(period: fmpq, match_hz: fmpq | None) -> arb:
@@ -35,6 +35,8 @@ def bilinear_transfer(model: Model, period: fmpq, match_hz: fmpq | None) -> Puls
 
     def mapped(root: Root) -> Mapped:
         value = root.evaluate()
+        if root.real and vanishes(k - value):
+            return (-2 * k, None)
         on_axis = is_exactly_zero(value.real)
         image = acb(1) if root.at_origin else (k + value) / (k - value)
         return (_norm(k - value, root), ZRoot(image, root.real, on_axis, root.key))
@@ -47,12 +49,14 @@ def backward_difference_transfer(model: Model, period: fmpq) -> PulseTransfer:
 
     def mapped(root: Root) -> Mapped:
         lead = 1 - root.evaluate() * period
+        if root.real and vanishes(lead):
+            return (-1 / arb(period), None)
         # 1/lead is exact for a root at the origin
         return (_norm(lead, root) / arb(period) ** root.degree, ZRoot(1 / lead, root.real, name=root.key))
 
     transfer = _assembled(model, mapped, None)
     poles_at_zero = (ZRoot(acb(0), True, name=0),) * max(0, -model.relative_degree)
-    return evolve(transfer, leading=0, poles=transfer.poles + poles_at_zero)
+    return evolve(transfer, leading=transfer.leading - model.relative_degree, poles=transfer.poles + poles_at_zero)
 
 
 def matched_transfer(model: Model, period: fmpq, match_hz: fmpq | None, zeros_at_infinity: str) -> PulseTransfer:
@@ -87,20 +91,24 @@ def _norm(value: acb, root: Root) -> arb:
 def _assembled(model: Model, mapped: Callable[[Root], Mapped], at_infinity: ZRoot | None) -> PulseTransfer:
     """The product of all mapped factors; ``at_infinity`` is where a zero at s = infinity goes (None: to 1/z = 0)."""
     gain = model.gain.value()
+    late = 0
 
     def collect(roots: Roots, power: int) -> tuple[ZRoot, ...]:
-        nonlocal gain
+        nonlocal gain, late
         found: list[ZRoot] = []
         for root, times in roots.items():
             scale, z_root = mapped(root)
             gain *= scale ** (power * times)
-            found += [z_root] * times
+            if z_root is None:
+                late += power * times
+            else:
+                found += [z_root] * times
         return tuple(found)
 
     zeros = collect(model.zeros, 1)
     poles = collect(model.poles, -1)
     excess = model.relative_degree
     if at_infinity is None:
-        return PulseTransfer(gain, excess, zeros, poles)
+        return PulseTransfer(gain, excess + late, zeros, poles)
     extra = (at_infinity,) * abs(excess)
-    return PulseTransfer(gain, 0, zeros + (extra if excess > 0 else ()), poles + (extra if excess < 0 else ()))
+    return PulseTransfer(gain, late, zeros + (extra if excess > 0 else ()), poles + (extra if excess < 0 else ()))

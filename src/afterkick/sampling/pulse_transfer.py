@@ -9,7 +9,7 @@ from attrs import frozen
 from flint import acb, acb_poly, arb, ctx, fmpq
 
 from afterkick.model.roots import Root
-from afterkick.numbers import is_exactly_zero
+from afterkick.numbers import COINCIDENCE_BITS, is_exactly_zero
 
 __all__ = ["PulseTransfer", "ZRoot", "expanded", "exponential", "real_polynomial_roots"]
 
@@ -90,13 +90,19 @@ def expanded(roots: Iterable[ZRoot]) -> list[arb]:
 def real_polynomial_roots(coefficients: Sequence[arb]) -> tuple[ZRoot, ...] | None:
     """The roots of a real polynomial with ball coefficients, lowest power first.
 
-    None where this working precision can't isolate them or decide which are real.
+    None where this working precision can't isolate them or decide which are real.  At 2048 bits a polynomial that may
+    vanish at 1 or -1 does so: only there do double roots come about by themselves.
     """
     degree = len(coefficients) - 1
     if degree == 0:
         return ()
     if coefficients[-1].contains(0):
         return None
+    if ctx.prec >= COINCIDENCE_BITS:
+        for place in (1, -1):
+            if sum((c * place**k for k, c in enumerate(coefficients)), arb(0)).contains(0):
+                rest = real_polynomial_roots(_without(coefficients, place))
+                return None if rest is None else (*rest, ZRoot(acb(place), True))
     if degree == 1:
         return (ZRoot(acb(-coefficients[0] / coefficients[1]), True),)
     if degree == 2:
@@ -106,6 +112,15 @@ def real_polynomial_roots(coefficients: Sequence[arb]) -> tuple[ZRoot, ...] | No
     except ValueError:
         return None
     return _classified(found)
+
+
+def _without(coefficients: Sequence[arb], place: int) -> list[arb]:
+    """The quotient by (z - place), which divides the polynomial: Horner's rule, highest power first."""
+    quotient, total = [], arb(0)
+    for coefficient in reversed(coefficients[1:]):
+        total = total * place + coefficient
+        quotient.append(total)
+    return quotient[::-1]
 
 
 def _quadratic_roots(c0: arb, c1: arb, c2: arb) -> tuple[ZRoot, ...] | None:

@@ -5,7 +5,7 @@ h(nT), the Dirac part m0 apart, and the mean of both sides where h jumps at t = 
 response: the peak to its largest magnitude, r.m.s. to its r.m.s., the area to its absolute area.
 """
 
-from math import atan2, ceil, inf, log, pi
+from math import atan2, ceil, inf, isfinite, log, pi
 
 import numpy as np
 from attrs import frozen
@@ -47,34 +47,37 @@ _FRACTIONS = 8
 
 @frozen
 class ImpulseError:
-    """Relative figures; the aligned ones with the analytic response ``delay_samples`` late, which minimises r.m.s."""
+    """Relative figures; the aligned ones with the analytic response ``delay_samples`` late, which minimises r.m.s.
 
-    peak: float
-    rms: float
-    area: float
+    None where there is nothing to relate to (the analytic response is zero at every sample) or no finite number.
+    """
+
+    peak: float | None
+    rms: float | None
+    area: float | None
     delay_samples: float
-    peak_aligned: float
-    rms_aligned: float
+    peak_aligned: float | None
+    rms_aligned: float | None
 
 
 @frozen
 class StepError:
-    """Relative to the largest magnitude of the analytic step response over the horizon."""
+    """Relative to the largest magnitude of the analytic step response over the horizon; None as above."""
 
-    peak: float
-    between_samples: float
+    peak: float | None
+    between_samples: float | None
     """Largest difference of the continuous response from the held output, anywhere in the sampling intervals."""
 
 
 @frozen
 class BandError:
-    """The largest differences of the frequency response up to ``up_to_hz``."""
+    """The largest differences of the frequency response up to ``up_to_hz``; None where no frequency has one."""
 
     up_to_hz: float
-    magnitude_db: float
-    magnitude_at_hz: float
-    phase_deg: float
-    phase_at_hz: float
+    magnitude_db: float | None
+    magnitude_at_hz: float | None
+    phase_deg: float | None
+    phase_at_hz: float | None
 
 
 @frozen
@@ -93,10 +96,12 @@ class ResponseErrors:
     """Everything ``check`` says about sampling."""
 
     horizon_samples: int
-    impulse: ImpulseError
-    step: StepError
+    impulse: ImpulseError | None
+    """None for an improper model, whose response holds derivatives of the Dirac impulse."""
+    step: StepError | None
     staircase_at_samples: float | None
-    """Worst difference at the samples per unit of a staircase input; None where no bound exists (integrators)."""
+    """Worst difference at the samples per unit of a staircase input; None where no bound exists (integrators, improper
+    models)."""
     staircase_between_samples: float | None
     band: BandError
     dc_gain_relative: float | None
@@ -110,21 +115,43 @@ class ResponseErrors:
 def response_errors(sampled: Sampled, band_hz: fmpq | None = None) -> ResponseErrors:
     """The errors of a sampled filter; ``band_hz`` defaults to a tenth of the rate."""
     horizon = _horizon_samples(sampled)
-    try:
-        comparison = _Comparison.of(sampled, grid(horizon, _POINTS), exact=False)
-    except Cancelling:
-        comparison = _Comparison.of(sampled, grid(horizon, _EXACT_POINTS), exact=True)
-    bounded = sampled.stable and sampled.model.stability == "stable"
     return ResponseErrors(
         horizon,
-        comparison.impulse(),
-        comparison.step(),
-        comparison.staircase_at_samples() if bounded else None,
-        comparison.staircase_between_samples() if bounded else None,
+        *_time_errors(sampled, horizon),
         _band_error(sampled, band_hz if band_hz is not None else sampled.rate_hz / 10),
         *_gain_errors(sampled),
         _mode_shifts(sampled),
     )
+
+
+def _time_errors(
+    sampled: Sampled, horizon: int
+) -> tuple[ImpulseError | None, StepError | None, float | None, float | None]:
+    """Impulse, step, and the worst difference for staircase inputs at and between the samples."""
+    if sampled.model.relative_degree < 0:
+        return None, None, None, None
+    with np.errstate(over="ignore", invalid="ignore", under="ignore"):
+        try:
+            comparison = _Comparison.of(sampled, grid(horizon, _POINTS), exact=False)
+        except Cancelling:
+            comparison = _Comparison.of(sampled, grid(horizon, _EXACT_POINTS), exact=True)
+        impulse, step = comparison.impulse(), comparison.step()
+        if not (sampled.stable and sampled.model.stability == "stable"):
+            return impulse, step, None, None
+        return (
+            impulse,
+            step,
+            _finite(comparison.staircase_at_samples()),
+            _finite(comparison.staircase_between_samples()),
+        )
+
+
+def _finite(value: float) -> float | None:
+    return value if isfinite(value) else None
+
+
+def _relative(value: float, scale: float) -> float | None:
+    return _finite(value / scale) if scale else None
 
 
 def _horizon_samples(sampled: Sampled) -> int:
@@ -185,13 +212,15 @@ class _Comparison:
         difference = self.discrete - self.analytic
         delay, aligned = self._aligned()
         return ImpulseError(
-            float(np.max(np.abs(difference))) / self._peak(),
-            self._rms(difference) / self._rms(self.analytic),
-            float(np.sum(self.points.weights * np.abs(difference)))
-            / float(np.sum(self.points.weights * np.abs(self.analytic))),
+            _relative(float(np.max(np.abs(difference))), self._peak()),
+            _relative(self._rms(difference), self._rms(self.analytic)),
+            _relative(
+                float(np.sum(self.points.weights * np.abs(difference))),
+                float(np.sum(self.points.weights * np.abs(self.analytic))),
+            ),
             delay,
-            float(np.max(np.abs(aligned))) / self._peak(),
-            self._rms(aligned) / self._rms(self.analytic),
+            _relative(float(np.max(np.abs(aligned))), self._peak()),
+            _relative(self._rms(aligned), self._rms(self.analytic)),
         )
 
     def _aligned(self) -> tuple[float, Floats]:
@@ -225,7 +254,7 @@ class _Comparison:
         peak = max(float(np.max(np.abs(values))) for values in self.step_within)
         at_samples = float(np.max(np.abs(self.step_discrete - self.step_within[0])))
         between = max(float(np.max(np.abs(values - self.step_discrete))) for values in self.step_within)
-        return StepError(at_samples / peak, between / peak)
+        return StepError(_relative(at_samples, peak), _relative(between, peak))
 
     def staircase_at_samples(self) -> float:
         held = sample(self.sampled.model, Sampling(rate_hz=self.sampled.rate_hz, method="zero-order-hold"))
@@ -276,7 +305,9 @@ def _band_error(sampled: Sampled, up_to_hz: fmpq) -> BandError:
             wanted = sampled.model.at(acb(0, w))
             ratio = transfer.at(inverse_z) * inverse_z**sampled.delay_samples / wanted
             rows.append((frequency, _decibels(ratio), _degrees(ratio)))
-    finite = [row for row in rows if row[1] == row[1]]
+    finite = [row for row in rows if isfinite(row[1]) and isfinite(row[2])]
+    if not finite:
+        return BandError(limit, None, None, None, None)
     by_magnitude = max(finite, key=lambda row: abs(row[1]))
     by_phase = max(finite, key=lambda row: abs(row[2]))
     return BandError(limit, by_magnitude[1], by_magnitude[0], by_phase[2], by_phase[0])

@@ -33,7 +33,11 @@ def sample(model: Model, options: Sampling) -> Sampled:
     rest = model.dead_time_s - whole / options.rate_hz
     problems = [*_improper(model, options), *_fractional(model, options, rest)]
     if not problems:
-        problems = [*_mapped_to_infinity(model, options), *_unmatchable(model, options)]
+        problems = [
+            *_mapped_to_infinity(model, options),
+            *_unmatchable(model, options),
+            *_folded_to_zero(model, options),
+        ]
     if problems:
         raise Refused(problems)
     return Sampled(model, options, whole, rest, _method(model, options, rest), tuple(_fast_modes(model, options)))
@@ -123,6 +127,22 @@ def _unmatchable(model: Model, options: Sampling) -> list[Problem]:
     ]
 
 
+def _folded_to_zero(model: Model, options: Sampling) -> list[Problem]:
+    """An undamped mode at a multiple of the rate is a constant to the samples."""
+    if options.method not in (*INVARIANT_METHODS, "matched"):
+        return []
+    return [
+        Problem(
+            "sampling.rate_hz",
+            f"{options.method} with an undamped mode at {folded[0]:.6g} Hz, a multiple of the rate",
+            "a rate that is not the mode's frequency divided by a whole number",
+            f"a rate above {2 * folded[0]:.6g} Hz",
+        )
+        for root in model.poles
+        if model.signs[root] == 0 and (folded := aliased_hz(root, options.rate_hz)) and folded[1] == 0.0
+    ]
+
+
 def aliased_hz(root: Root, rate_hz: fmpq) -> tuple[float, float] | None:
     """Frequency of a mode at or above half the rate, and where sampling folds it to; None for a slower mode."""
 
@@ -137,7 +157,8 @@ def aliased_hz(root: Root, rate_hz: fmpq) -> tuple[float, float] | None:
         return None
     rate = float(Fraction(int(rate_hz.numerator), int(rate_hz.denominator)))
     value = mid_float(cycles)
-    return value * rate, abs(value - round(value)) * rate
+    off = cycles - round(value)
+    return value * rate, 0.0 if off.contains(0) else abs(mid_float(off)) * rate
 
 
 def _fast_modes(model: Model, options: Sampling) -> list[str]:

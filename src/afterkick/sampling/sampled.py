@@ -191,8 +191,7 @@ def _sections(sampled: Sampled, bits: int) -> tuple[Section, ...]:
 
 def _within(group: tuple[arb, ...], bits: int) -> bool:
     """Whether every radius is at most 2^-bits of the largest coefficient."""
-    largest = max(float(abs(value).mid()) for value in group)
-    if largest == 0.0:
-        return all(value.is_exact() for value in group)
-    limit = abs(max(group, key=lambda value: float(abs(value).mid())).mid()) * arb(2) ** -bits
-    return all(bool(value.rad() <= limit) for value in group)
+    largest = arb(0)
+    for value in group:
+        largest = largest.max(abs(value).lower())
+    return all(bool(value.rad() <= largest * arb(2) ** -bits) for value in group)

@@ -1,0 +1,227 @@
+"""What a Program can do at worst, for every input within the promised peak: rigorous, from exact linear responses.
+
+While no word has overflowed, each word is the exact linear response to the input plus the responses to the roundings,
+whose sizes are known.  If the sum of the worst of all of these fits every word, no word ever overflows; so the bounds
+hold for ever, by induction over the samples.  If it does not fit, nothing is proved, and the result says which word.
+"""
+
+from functools import cached_property
+from math import ceil, floor, inf, sqrt
+
+import numpy as np
+from attrs import frozen
+from flint import arb, fmpq
+from numpy.typing import NDArray
+
+from afterkick.fixed.linear import LinearSystem, RationalResponse
+from afterkick.fixed.modal_sums import AbsoluteSum, ModalResponse, absolute_sum, difference, modal_response, values
+from afterkick.fixed.program import Program
+from afterkick.fixed.simulate import simulate
+from afterkick.model.partial_fractions import Mode
+from afterkick.numbers import certified, fraction, is_exactly_zero
+from afterkick.sampling.sampled import Sampled
+
+__all__ = ["Attained", "Bounds", "OutputError", "WordRange", "bounds"]
+
+ATTAINING_SAMPLES = 8192
+"""Of the worst input that is tried on the simulator."""
+
+
+@frozen
+class WordRange:
+    """What a computed word can hold, in its own last places; both limits are bounds."""
+
+    word: str
+    lowest: float
+    highest: float
+    from_input: float
+    """Of the magnitude, the input's part."""
+    from_rounding: float
+    capacity_low: int
+    capacity_high: int
+
+    @property
+    def fits(self) -> bool:
+        """Whether the word never overflows, if no other does."""
+        return self.capacity_low <= self.lowest and self.highest <= self.capacity_high
+
+
+@frozen
+class OutputError:
+    """Bounds of the output's distance, in output counts, for every input within the promised peak."""
+
+    coefficients: float
+    """The rounded coefficients against the exact sampled filter."""
+    rounding: float
+    """The roundings of all sums."""
+    sampling: float | None
+    """The sampled filter against the continuous model, at the samples, for staircase inputs; None: no bound exists."""
+
+    @property
+    def total(self) -> float | None:
+        """Against the continuous model, for staircase inputs."""
+        return None if self.sampling is None else self.coefficients + self.rounding + self.sampling
+
+
+@frozen
+class Attained:
+    """How near a simulated input comes to a bound."""
+
+    bound: float
+    simulated: float
+
+    @property
+    def ratio(self) -> float:
+        """simulated / bound."""
+        return self.simulated / self.bound if self.bound else 1.0
+
+
+@frozen(eq=False)
+class Bounds:
+    """All bounds of one program."""
+
+    peak_code: int
+    """The largest input magnitude, in codes."""
+    words: tuple[WordRange, ...]
+    unbounded: str
+    """Why no bound exists; empty where one does."""
+    output: OutputError | None
+    """None where nothing is proved."""
+    dead_band: float | None
+    """Bound of the output, in counts, long after the input has gone to zero; None where nothing is proved."""
+    noise_rms: float | None
+    """Estimate: white rounding errors, uniformly distributed, in counts; None where it has no limit."""
+    peak_reached: Attained | None
+    """The output word's range against the input that drives it there."""
+
+    @property
+    def overflowing(self) -> tuple[WordRange, ...]:
+        """The words that may overflow."""
+        return tuple(word for word in self.words if not word.fits)
+
+    @cached_property
+    def proved(self) -> bool:
+        """Whether no word ever overflows."""
+        return not self.unbounded and not self.overflowing
+
+
+def bounds(program: Program, sampled: Sampled, held: Sampled | None) -> Bounds:
+    """The bounds of ``program`` against the exact ``sampled`` filter.
+
+    ``held`` is the zero-order-hold sampling of the same model, what the continuous model does to a staircase; None where
+    the filter is that already.
+    """
+    system = LinearSystem(program)
+    peak = _peak_code(program)
+    to_input = system.responses(None)
+    to_rounding = {source: system.responses(source.dest) for source in system.sources}
+    sums: dict[RationalResponse, AbsoluteSum] = {}
+
+    def total(response: RationalResponse) -> AbsoluteSum:
+        return sums.setdefault(response, absolute_sum(modal_response(response)))
+
+    words = []
+    for name in system.computed:
+        word = program.word(name)
+        reach = peak * total(to_input[name]).upper
+        up = down = 0.0
+        for source, responses in to_rounding.items():
+            response = responses[name]
+            if response.numerator.is_zero():
+                continue
+            size = total(response).upper
+            mean = response.total
+            shift = 0.0 if mean is None else float(fraction(source.mean * mean))
+            up += _up(float(fraction(source.radius)) * size + shift)
+            down += _up(float(fraction(source.radius)) * size - shift)
+        words.append(
+            WordRange(name, _down(-reach - down), _up(reach + up), reach, max(up, down), word.lowest, word.highest)
+        )
+    unbounded = _unbounded(words)
+    noise = sum(total(responses[program.output]).squares for responses in to_rounding.values()) / 12
+    proved = not unbounded and all(word.fits for word in words)
+    output = words[[word.word for word in words].index(program.output)]
+    return Bounds(
+        peak,
+        tuple(words),
+        unbounded,
+        _output_error(program, sampled, held, to_input[program.output], output, peak) if proved else None,
+        float(floor(output.from_rounding)) if proved else None,
+        None if noise == inf else sqrt(noise),
+        _peak_reached(program, to_input[program.output], output, peak) if proved else None,
+    )
+
+
+def _peak_code(program: Program) -> int:
+    """The promised peak in codes, rounded up; full scale is the code -2^(bits-1)."""
+    scale = 1 << (program.data_bits - 1)
+    return min(ceil(fraction(program.input_format.peak / program.input_format.full_scale * scale)), scale)
+
+
+def _up(value: float) -> float:
+    return float(np.nextafter(np.nextafter(value, inf), inf))
+
+
+def _down(value: float) -> float:
+    return -_up(-value)
+
+
+def _unbounded(words: list[WordRange]) -> str:
+    names = [word.word for word in words if word.highest == inf]
+    if not names:
+        return ""
+    return f"the response of {', '.join(names)} does not decay, so only saturation limits it"
+
+
+def _exact_response(sampled: Sampled, scale: fmpq) -> ModalResponse:
+    """The exact sampled filter without its whole-sample delay, in output counts per input count."""
+    early = 1 + sum(is_exactly_zero(pole.value) for pole in sampled.transfer().poles)
+
+    def compute() -> tuple[tuple[arb, ...], tuple[Mode, ...]]:
+        first = tuple(value * scale for value in sampled.first_samples(early))
+        modes = sampled.pulse_modes()
+        return first, tuple(Mode(m.pole, m.real, tuple(c * scale for c in m.coefficients)) for m in modes)
+
+    def precise(found: tuple[tuple[arb, ...], tuple[Mode, ...]]) -> bool:
+        return all(
+            (m.pole.is_exact() or int(m.pole.rel_accuracy_bits()) >= 100)
+            and all(int(c.rel_accuracy_bits()) >= 100 for c in m.coefficients)
+            for m in found[1]
+        )
+
+    return ModalResponse(*certified(compute, precise, "the exact pulse response"))
+
+
+def _output_error(
+    program: Program,
+    sampled: Sampled,
+    held: Sampled | None,
+    response: RationalResponse,
+    output: WordRange,
+    peak: int,
+) -> OutputError | None:
+    if not sampled.stable:
+        return None
+    scale = program.input_format.full_scale / program.output_format.full_scale
+    late = RationalResponse(response.numerator.right_shift(program.delay_samples), response.denominator)
+    exact = _exact_response(sampled, scale)
+    coefficients = peak * absolute_sum(difference(modal_response(late), exact)).upper
+    sampling: float | None = 0.0
+    if held is not None:
+        sampling = peak * absolute_sum(difference(exact, _exact_response(held, scale))).upper
+    return OutputError(_up(coefficients), output.from_rounding, sampling if sampling is None else _up(sampling))
+
+
+def _peak_reached(program: Program, response: RationalResponse, output: WordRange, peak: int) -> Attained:
+    """The sign pattern of the reversed response drives the output to its bound, up to what the roundings add."""
+    codes = worst_input(program, response, peak)
+    reached = int(np.max(np.abs(simulate(program, codes))))
+    return Attained(max(output.highest, -output.lowest), float(reached))
+
+
+def worst_input(program: Program, response: RationalResponse, peak: int) -> NDArray[np.int64]:
+    """The input, at most ``peak`` in magnitude, that drives the last output sample as far up as any can."""
+    shape = values(modal_response(response), ATTAINING_SAMPLES)[::-1]
+    word = program.word(program.input)
+    codes = np.where(shape < 0, -peak, min(peak, word.highest)).astype(np.int64)
+    return np.clip(codes, word.lowest, word.highest)

@@ -1,0 +1,221 @@
+"""Rigorous absolute sums of pulse responses.
+
+A response is a few exact first samples and then a sum of modes.  It is evaluated in float64 blocks: the powers within a
+block and the weight of each mode at the start of a block come from balls, so that no error accumulates; what float64
+rounds is bounded and added; what comes after the last block is bounded by a geometric series.
+"""
+
+from collections.abc import Iterator, Sequence
+from functools import lru_cache
+from math import comb, inf
+
+import numpy as np
+from attrs import frozen
+from flint import acb, arb, fmpq, fmpq_poly
+from numpy.typing import NDArray
+
+from afterkick.fixed.linear import RationalResponse
+from afterkick.model.partial_fractions import Mode, expand, polynomial_taylor
+from afterkick.model.roots import RADIANS, algebraic_roots
+from afterkick.numbers import certified, working_bits
+
+__all__ = ["AbsoluteSum", "ModalResponse", "absolute_sum", "difference", "modal_response", "values"]
+
+BLOCK = 1024
+LONGEST = 1 << 23
+"""Samples after which the tail bound is taken as it is."""
+TAIL = 2.0**-24
+"""Of the sum, what the tail may add, unless LONGEST comes first."""
+UNIT_ROUNDOFF = 2.0**-53
+POWER_BITS = 192
+
+Floats = NDArray[np.float64]
+
+
+@frozen(eq=False)
+class ModalResponse:
+    """h[n]: ``first`` (balls) for n < len(first), then sum over modes, j of c_j C(n-1, j) p^(n-1-j)."""
+
+    first: tuple[arb, ...]
+    modes: tuple[Mode, ...]
+
+    @property
+    def bounded(self) -> bool:
+        """Whether every pole is strictly inside the unit circle, so that the absolute sum is finite."""
+        return all(bool(abs(mode.pole) < 1) for mode in self.modes)
+
+
+@frozen
+class AbsoluteSum:
+    """Both limits are rigorous; ``upper`` is infinite where a mode does not decay."""
+
+    lower: float
+    upper: float
+    squares: float
+    """sum over n of h[n]^2, an estimate; infinite where a mode does not decay."""
+
+
+def modal_response(response: RationalResponse) -> ModalResponse:
+    """The exact response of a rational transfer function, coefficients good to float64 and more."""
+    degree_n, degree_d = response.numerator.degree(), response.denominator.degree()
+    length = max(degree_n, degree_d)
+    # in powers of z: z^length N(1/z) / (z^(length - degree_d) * prod(z - p))
+    top = fmpq_poly(_reversed(response.numerator, length))
+    bottom = fmpq_poly(_reversed(response.denominator, degree_d))
+    extra = length - degree_d
+
+    def compute() -> tuple[Mode, ...]:
+        poles = [(root.evaluate(), root.real, times) for root, times in algebraic_roots(bottom, RADIANS).items()]
+        every = [*poles, (acb(0), True, extra)] if extra else poles
+        return expand(polynomial_taylor(top), every)[: len(poles)]
+
+    return ModalResponse(
+        tuple(arb(value) for value in response.samples(extra + 1)), certified(compute, _precise, "a pulse response")
+    )
+
+
+def difference(one: ModalResponse, other: ModalResponse) -> ModalResponse:
+    """one - other."""
+    length = max(len(one.first), len(other.first))
+    first = tuple(a - b for a, b in zip(_extended(one, length), _extended(other, length), strict=True))
+    negated = tuple(Mode(m.pole, m.real, tuple(-c for c in m.coefficients)) for m in other.modes)
+    return ModalResponse(first, one.modes + negated)
+
+
+def absolute_sum(response: ModalResponse) -> AbsoluteSum:
+    """sum over n of |h[n]|, from below and above."""
+    first = sum((abs(value) for value in response.first), arb(0))
+    lower, upper = _down(float(first.lower())), _up(float(first.upper()))
+    if not response.bounded:
+        return AbsoluteSum(lower, inf, inf)
+    squares = sum(float(value.mid()) ** 2 for value in response.first)
+    start = len(response.first)
+    while True:
+        tail = _tail(response.modes, start)
+        if tail <= TAIL * lower or start >= LONGEST:
+            return AbsoluteSum(lower, _up(upper + tail), squares)
+        block, slack = _block(response.modes, start)
+        total = float(np.sum(np.abs(block)))
+        squares += float(block @ block)
+        # pairwise or not, a float sum of 1024 terms is within 1024 unit round-offs
+        rounding = total * BLOCK * UNIT_ROUNDOFF + slack
+        lower, upper = _down(lower + max(total - rounding, 0.0)), _up(upper + total + rounding)
+        start += BLOCK
+
+
+def values(response: ModalResponse, number: int) -> Floats:
+    """h[0] .. h[number-1] in float64, an estimate good to the slack of the blocks."""
+    parts = [np.array([float(value.mid()) for value in response.first])]
+    start = len(response.first)
+    while start < number:
+        parts.append(_block(response.modes, start)[0])
+        start += BLOCK
+    found: Floats = np.concatenate(parts)[:number]
+    return found
+
+
+def _up(value: float) -> float:
+    return float(np.nextafter(value, inf))
+
+
+def _down(value: float) -> float:
+    return max(float(np.nextafter(value, -inf)), 0.0)
+
+
+def _reversed(polynomial: fmpq_poly, length: int) -> list[fmpq]:
+    coefficients = polynomial.coeffs()
+    padded = [*coefficients, *([fmpq(0)] * (length + 1 - len(coefficients)))]
+    return padded[::-1]
+
+
+def _extended(response: ModalResponse, length: int) -> Iterator[arb]:
+    yield from response.first
+    for n in range(len(response.first), length):
+        total = arb(0)
+        for mode in response.modes:
+            value = acb(0)
+            for j, coefficient in enumerate(mode.coefficients):
+                if n - 1 >= j:
+                    value += coefficient * comb(n - 1, j) * mode.pole ** (n - 1 - j)
+            total += value.real if mode.real else 2 * value.real
+        yield total
+
+
+def _precise(modes: Sequence[Mode]) -> bool:
+    """Whether poles have 100 bits, and coefficients relative to the largest."""
+    largest = max((abs(c).upper() for mode in modes for c in mode.coefficients), default=arb(0))
+    limit = largest * arb(2) ** -100
+    return all(
+        (mode.pole.is_exact() or int(mode.pole.rel_accuracy_bits()) >= 100)
+        and all(bool(c.rad() <= limit) for c in mode.coefficients)
+        for mode in modes
+    )
+
+
+def _block(modes: Sequence[Mode], start: int) -> tuple[Floats, float]:
+    """h[start] .. h[start + BLOCK - 1] without the first samples, and a bound of the sum of their errors."""
+    k0 = start - 1
+    weights: list[complex] = []
+    tables: list[NDArray[np.complex128]] = []
+    for mode in modes:
+        scale = 1 if mode.real else 2
+        times = len(mode.coefficients)
+        powers = [mode.pole ** (k0 - d) if k0 >= d else acb(0) for d in range(times)]
+        for i in range(times):
+            weight = sum((mode.coefficients[j] * comb(k0, j - i) * powers[j - i] for j in range(i, times)), acb(0))
+            weights.append(_to_complex(weight * scale))
+            tables.append(_powers(*_exact_parts(mode.pole), i))
+    factor, table = np.array(weights), np.array(tables)
+    found: Floats = factor.real @ table.real - factor.imag @ table.imag
+    sizes = float(np.sum(np.abs(factor) @ np.abs(table)))
+    # conversions to float64 (one round-off each), products and sums: each at most so many round-offs of the sizes;
+    # the last term is for powers that underflow
+    slack = (2 * len(weights) + 16) * UNIT_ROUNDOFF * sizes * (1 + 1e-9) + 1e-280 * float(np.sum(np.abs(factor)))
+    return found, slack
+
+
+def _to_complex(value: acb) -> complex:
+    """The midpoint; its radius is far below a unit round-off of the magnitude, or the value is as good as zero."""
+    return complex(float(value.real.mid()), float(value.imag.mid()))
+
+
+def _exact_parts(pole: acb) -> tuple[tuple[int, int], ...]:
+    """Midpoints and radii of a ball as exact mantissas and exponents: a key for the table of its powers."""
+    parts = (pole.real.mid(), pole.real.rad(), pole.imag.mid(), pole.imag.rad())
+    return tuple((int(m), int(e)) for m, e in (part.man_exp() for part in parts))
+
+
+@lru_cache(maxsize=256)
+def _powers(
+    re: tuple[int, int], re_radius: tuple[int, int], im: tuple[int, int], im_radius: tuple[int, int], lag: int
+) -> NDArray[np.complex128]:
+    """C(k, lag) p^(k - lag), k = 0 .. BLOCK - 1."""
+    with working_bits(POWER_BITS):
+        pole = acb(_ball(re, re_radius), _ball(im, im_radius))
+        power = acb(1)
+        found = [0j] * min(lag, BLOCK)
+        for k in range(lag, BLOCK):
+            found.append(_to_complex(power * comb(k, lag)))
+            power *= pole
+    return np.array(found)
+
+
+def _ball(mid: tuple[int, int], radius: tuple[int, int]) -> arb:
+    return arb(arb(mid[0]) * arb(2) ** mid[1], arb(radius[0]) * arb(2) ** radius[1])
+
+
+def _tail(modes: Sequence[Mode], start: int) -> float:
+    """A bound of the absolute sum from ``start`` on: terms C(k, j) r^(k-j) grow by at most q = (K+1)/(K+1-j) r."""
+    k0 = start - 1
+    total = arb(0)
+    for mode in modes:
+        radius = abs(mode.pole).upper()
+        for j, coefficient in enumerate(mode.coefficients):
+            if k0 < j:
+                return inf
+            q = radius * (k0 + 1) / (k0 + 1 - j)
+            if not q < 1:
+                return inf
+            size = abs(coefficient).upper() * (1 if mode.real else 2)
+            total += size * comb(k0, j) * radius ** (k0 - j) / (1 - q)
+    return _up(float(total.upper()))
