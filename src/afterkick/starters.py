@@ -2,6 +2,7 @@
 
 import re
 
+from afterkick.design.limits import visible
 from afterkick.design.names import identifier_fault
 from afterkick.errors import Problem, Refused
 from afterkick.resources import resource_folder
@@ -28,7 +29,8 @@ def starter_text(starter: str, name: str | None = None) -> str:
         return text
     fault = identifier_fault(name)
     if fault is not None:
-        raise Refused(Problem("NAME", fault, "a C identifier: the prefix of every emitted symbol", "choose another"))
+        accepted = "a C identifier: the prefix of every emitted symbol"
+        raise Refused(Problem("NAME", f"{visible(name)}, {fault}", accepted, "choose another name"))
     renamed, times = re.subn(r'^name  = "\w+"', lambda _: f'name  = "{name}"', text, count=1, flags=re.MULTILINE)
     assert times == 1, "a starter without a name line"
     return renamed

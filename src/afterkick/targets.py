@@ -5,7 +5,6 @@ A profile is a file NAME.toml in ``targets``; a folder of the user's own adds pr
 
 import tomllib
 from collections.abc import Iterator
-from difflib import get_close_matches
 from pathlib import Path
 from typing import Any
 
@@ -90,6 +89,8 @@ def find_target(name: str, extra_folder: Path | None = None) -> TargetProfile:
     profiles = load_targets(extra_folder)
     if name in profiles:
         return profiles[name]
+    from difflib import get_close_matches  # only a wrong name pays for it
+
     near = get_close_matches(name, profiles, n=1)
     remedy = f'did you mean "{near[0]}"?' if near else "add a profile of your own"
     raise Refused(Problem("target.name", f'unknown target "{name}"', ", ".join(profiles), remedy))
@@ -131,6 +132,8 @@ TABLES = (Compiler, Emulator)
 
 def _table_problems(table: dict[str, Any], schema: Any, where: str, skip: str = "") -> Iterator[Problem]:
     """Unknown keys, missing keys and wrong types, in that order."""
+    from difflib import get_close_matches
+
     known: dict[str, Attribute[Any]] = {field.name: field for field in fields(schema) if field.name != skip}
     for key in table:
         if key not in known:

@@ -99,16 +99,16 @@ def call(command: list[str], folder: Path, **options) -> bytes:
 
 
 COMMANDS = {
-    "gcc": ["gcc", "-std=c99"],
-    "g++": ["g++", "-std=c++17", "-x", "c++"],
-    "zig cc": [*ZIG, "cc", "-std=c99"],
-    "zig c++": [*ZIG, "c++", "-std=c++17", "-x", "c++", "-fno-exceptions", "-fno-rtti"],
+    "gcc": ["gcc", "-std=c99", "-O1"],
+    "g++": ["g++", "-std=c++17", "-O0", "-x", "c++"],
+    "zig cc": [*ZIG, "cc", "-std=c99", "-O0", "-g0"],
+    "zig c++": [*ZIG, "c++", "-std=c++17", "-O0", "-g0", "-x", "c++", "-fno-exceptions", "-fno-rtti"],
 }
 
 
 def build(compiler: str, folder: Path) -> None:
     """driver.c, which includes all the sources, as ``probe``: warnings as errors."""
-    call([*COMMANDS[compiler], "-O1", *WARNINGS, *SANITIZER, "-c", "driver.c", "-o", "driver.o"], folder)
+    call([*COMMANDS[compiler], *WARNINGS, *SANITIZER, "-c", "driver.c", "-o", "driver.o"], folder)
     # C++ of the wheel is linked as C: building its C++ runtime would take minutes, and the code needs none of it.
     linker = [*ZIG, "cc"] if compiler.startswith("zig") else COMMANDS[compiler][:1]
     call([*linker, *SANITIZER, "driver.o", "-o", "probe"], folder)
@@ -145,6 +145,21 @@ def test_random_designs(compiler, seeds, tmp_path):
     if compiler in ("gcc", "g++") and shutil.which(compiler) is None:
         pytest.skip(f"no {compiler} here; the compiler of the wheel is always used")
     compare(compiler, seeds, programs_of(tuple(seeds)), tmp_path)
+
+
+@pytest.mark.parametrize("compiler", ["gcc", "zig cc"])
+def test_sanitizer_is_awake(compiler, tmp_path):
+    """A sum that overflows stops the program: else the comparisons below would prove less than they say."""
+    if compiler == "gcc" and shutil.which(compiler) is None:
+        pytest.skip("no gcc here; the compiler of the wheel is always used")
+    (tmp_path / "driver.c").write_text(
+        "int main(int count, char **words)\n{ (void)words; return 2147483647 + count; }\n"
+    )
+    build(compiler, tmp_path)
+    assert subprocess.run(["./probe"], cwd=tmp_path, capture_output=True, check=False).returncode != 0
+    (tmp_path / "driver.c").write_text("int main(int count, char **words)\n{ (void)words; return count - 1; }\n")
+    build(compiler, tmp_path)
+    assert subprocess.run(["./probe"], cwd=tmp_path, capture_output=True, check=False).returncode == 0
 
 
 def test_random_designs_as_cpp_with_the_compiler_of_the_wheel(tmp_path):

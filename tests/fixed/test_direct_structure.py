@@ -173,8 +173,10 @@ def test_pole_on_the_circle_is_refused_where_the_exact_filter_has_none():
     program_of(([0.1], [-1]), marginal=True, coefficient_bits=16)
 
 
-def test_unstable_filter_is_refused():
-    assert "outside the unit circle" in refusal(([0.1], [-1.25]))
+def test_unstable_pole_stays_outside_or_is_refused():
+    assert program_of(([0.1], [-1.25])).sections[0].a == (16384, -20480, 0)
+    assert "no pole is outside" in refusal(([0.1], [-1 - 2**-20]))
+    assert "1 + a1 + a2 keeps 2 significant bits" in refusal(([0.1], [-1 - 3 * 2**-14]))
 
 
 def test_every_section_reports_its_problem():

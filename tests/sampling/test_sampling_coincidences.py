@@ -1,4 +1,4 @@
-"""Models and rates that meet by accident: a zero mapped to infinity, a sample that is exactly zero, a mode at the rate."""
+"""Models and rates that meet by accident: a zero mapped to infinity, a sample exactly zero, a mode at the rate."""
 
 import pytest
 from flint import arb, fmpq
@@ -29,11 +29,11 @@ def test_zero_that_is_mapped_to_infinity(method: str, zero: str) -> None:
     """(s - zero)/(s + 2)^2 at 1 Hz, by hand: bilinear -4v(1+v)/16, v = 1/z; backward difference -v/(3 - v)^2."""
     sections = sampled(ratio(["1", f"-{zero}"], ["1", "4", "4"]), 1, method).sections(100)
     found = [float(value) for value in pulse(sections, 5)]
-    if method == "bilinear":
-        expected = [0, -0.25, -0.25, 0, 0]
-    else:
-        expected = [0.0] + [-n / 3.0 ** (n + 1) for n in range(1, 5)]
-    assert found == pytest.approx(expected, rel=1e-15)
+    expected = {
+        "bilinear": [0, -0.25, -0.25, 0, 0],
+        "backward-difference": [0] + [-n / 3.0 ** (n + 1) for n in range(1, 5)],
+    }
+    assert found == pytest.approx(expected[method], rel=1e-15)
 
 
 @pytest.mark.parametrize(
@@ -75,7 +75,7 @@ def test_mode_that_the_samples_never_see(frequency: str, method: str) -> None:
 
 
 def test_ramped_mode_at_half_the_rate() -> None:
-    """w = pi, T = 1: the pulse equivalent of w^2/(s^2 + w^2) is (1 + 2v + v^2)/(1 + v)^2 = 1 but for its state at v = -1."""
+    """The hold table with wT = pi: w^2/(s^2 + w^2) becomes (1 + 2v + v^2)/(1 + 2v + v^2), which only passes on."""
     sections = sampled(undamped("0.5"), 1, "first-order-hold").sections(60)
     with working_bits(BITS):
         square = (2 * arb.pi() * arb("0.5")) ** 2
@@ -121,3 +121,36 @@ def test_impulse_response_between_samples_needs_no_extra_pole() -> None:
         pole = 2 * arb.pi()
         assert overlap(section.b, [arb(0), pole / 10 * (-pole / 20).exp(), arb(0)])
         assert overlap(section.a, [arb(1), -(-pole / 10).exp(), arb(0)])
+
+
+def test_notch_that_folds_onto_zero_frequency() -> None:
+    """Matched at a rate equal to the notch: its zeros fall on z = 1, where the gain was to be matched."""
+    notch = blocks(schema.Notch(center_hz=fmpq(100), quality=fmpq(10)))
+    with pytest.raises(Refused, match="100"):
+        sampled(notch, 100, "matched").sections(60)
+
+
+@pytest.mark.parametrize("order", [1, 3, 6])
+def test_zero_next_to_the_origin(order: int) -> None:
+    """A pole at -1000 rad/s sampled at 1 Hz leaves a zero of the size e^-1000 beside ordinary ones."""
+    model = blocks(
+        schema.Highpass(family="butterworth", order=order, corner_hz=exact("0.1")),
+        schema.RcHighpass(ohm=fmpq(1), farad=exact("1e-3")),
+    )
+    values = pulse(sampled(model, 1, "impulse-invariant").sections(120), 6)
+    with working_bits(4096):
+        response = [evaluate(model.response_modes(), fmpq(n)) for n in range(6)]
+        expected = [response[0] / 2 + model.feedthrough(), *response[1:]]
+    assert overlap(values, expected)
+
+
+def test_damped_mode_at_the_rate() -> None:
+    """Poles -40 +- 20j Hz at 1 Hz: both images are the same real number, which has no sum of simple terms."""
+    model = blocks(schema.Bandpass(family="butterworth", order=1, low_hz=fmpq(20), high_hz=fmpq(100)))
+    assert sorted(round(float(root.evaluate().imag) / 6.283185307179586, 9) for root in model.poles) == [20.0]
+    filtered = sampled(model, 1, "zero-order-hold")
+    assert filtered.parallel(60) is None
+    values = pulse(filtered.sections(100), 4)
+    with working_bits(BITS):
+        step = [evaluate(model.response_modes(1), fmpq(n)) for n in range(4)]
+        assert overlap(values, [step[0], *(step[n] - step[n - 1] for n in range(1, 4))])

@@ -31,6 +31,7 @@ MODELS = {
     ),
 }
 RATE = fmpq(20)
+EXACT_AT_ZERO = ("zero-order-hold", "first-order-hold", "bilinear", "matched", "backward-difference")
 
 
 def at(sections: Sequence[Section], inverse_z: acb) -> acb:
@@ -62,9 +63,7 @@ def denominator(model: Model, images: Sequence[acb]) -> list[arb]:
     return [value.real for value in total]
 
 
-@pytest.mark.parametrize(
-    "method", ["zero-order-hold", "first-order-hold", "bilinear", "matched", "backward-difference"]
-)
+@pytest.mark.parametrize("method", EXACT_AT_ZERO)
 @pytest.mark.parametrize("name", MODELS)
 def test_gain_at_zero_frequency_is_kept(name: str, method: str) -> None:
     """H(z = 1) = H(s = 0): holds are exact for constants, the maps send s = 0 to z = 1."""
@@ -155,9 +154,7 @@ def test_where_zeros_at_infinity_go(name: str) -> None:
     assert not first[excess].contains(0)
 
 
-@pytest.mark.parametrize(
-    "method", ["bilinear", "matched", "zero-order-hold", "first-order-hold", "backward-difference"]
-)
+@pytest.mark.parametrize("method", EXACT_AT_ZERO)
 def test_zeros_at_the_origin_stay_at_one(method: str) -> None:
     """A band-pass of prototype order 3 has three zeros at s = 0; the holds keep one or two exactly."""
     filtered = sampled(MODELS["elliptic band-pass"], RATE, method)

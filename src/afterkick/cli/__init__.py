@@ -3,7 +3,9 @@
 Commands are imported when they run, so that ``--help`` costs nothing.
 """
 
+import sys
 from importlib import import_module
+from io import TextIOWrapper
 
 import click
 
@@ -58,3 +60,5 @@ def main() -> None:
     Exit codes: 0 holds, 1 a budget falls short or could not be judged, 2 the input is wrong, 3 this machine lacks
     something.
     """
+    if isinstance(sys.stdout, TextIOWrapper):  # a terminal without Greek letters shows a question mark
+        sys.stdout.reconfigure(errors="replace")

@@ -4,7 +4,8 @@ import json
 import os
 import tempfile
 from collections.abc import Iterator, Mapping
-from contextlib import contextmanager
+from contextlib import contextmanager, suppress
+from errno import EISDIR
 from pathlib import Path
 from typing import Any
 
@@ -12,8 +13,20 @@ import click
 
 from afterkick.design import Design, read_design
 from afterkick.errors import Lacking, Problem, Refused, Uncertified
+from afterkick.targets import find_target
 
-__all__ = ["FALLS_SHORT", "HOLDS", "LACKING", "WRONG", "json_option", "load", "print_json", "reported", "write_all"]
+__all__ = [
+    "FALLS_SHORT",
+    "HOLDS",
+    "LACKING",
+    "WRONG",
+    "json_option",
+    "load",
+    "print_json",
+    "reported",
+    "targets_option",
+    "write_all",
+]
 
 HOLDS, FALLS_SHORT, WRONG, LACKING = 0, 1, 2, 3
 
@@ -23,22 +36,35 @@ LARGEST_FILE = 1 << 20
 json_option = click.option("--json", "as_json", is_flag=True, help="Print one JSON object and nothing else.")
 
 
-def load(path: Path) -> Design:
-    """The design in a file.
+targets_option = click.option(
+    "--targets", type=click.Path(path_type=Path), help="A folder of your own target profiles as well."
+)
+
+
+def load(path: Path, targets: Path | None = None) -> Design:
+    """The design in a file, whose target is known.
 
     :raises Refused: for a file that can't be read, and for what is wrong in it.
     """
+    design = read_design(_text_of(path), str(path))
+    find_target(design.target.name, targets)
+    return design
+
+
+def _text_of(path: Path) -> str:
     accepted = "a design file: UTF-8 text of at most 1 MiB"
     try:
-        if path.stat().st_size > LARGEST_FILE:
-            raise Refused(Problem("file", f"{path.stat().st_size} bytes", accepted))
-        text = path.read_bytes().decode("utf-8-sig")
+        with path.open("rb") as file:
+            content = file.read(LARGEST_FILE + 1)  # also of a device that never ends
+        if len(content) > LARGEST_FILE:
+            raise Refused(Problem("file", "more than 1 MiB", accepted, "check the path: this is no design"))
+        text = content.decode("utf-8-sig")
     except OSError as error:
         raise Refused(Problem("file", error.strerror or str(error), accepted, "check the path")) from None
     except UnicodeDecodeError as error:
         found = f"a byte that is not UTF-8 at offset {error.start}"
         raise Refused(Problem("file", found, accepted, "save the file as UTF-8")) from None
-    return read_design(text, str(path))
+    return text
 
 
 @contextmanager
@@ -60,19 +86,22 @@ def reported(subject: str) -> Iterator[list[int]]:
 
 
 def print_json(data: Mapping[str, Any]) -> None:
-    """One object on standard output; refuses what JSON has no word for."""
-    click.echo(json.dumps(data, indent=2, ensure_ascii=False, allow_nan=False))
+    """One object on standard output, in ASCII whatever the terminal takes; refuses what JSON has no word for."""
+    click.echo(json.dumps(data, indent=2, allow_nan=False))
 
 
 def write_all(folder: Path, files: Mapping[str, str]) -> None:
     """All files or none: written beside their places first, then moved.
 
-    :raises Refused: where the folder can't be written.
+    :raises Refused: where the folder or a file can't be written.
     """
     staged: list[tuple[str, Path]] = []
+    created = [path for path in (folder, *folder.parents) if not path.exists()]
     try:
         folder.mkdir(parents=True, exist_ok=True)
         for name, text in files.items():
+            if (folder / name).is_dir():
+                raise IsADirectoryError(EISDIR, f"a folder is in the place of {name}")
             handle, temporary = tempfile.mkstemp(prefix=".afterkick-", dir=folder)
             staged.append((temporary, folder / name))
             with os.fdopen(handle, "w", encoding="utf-8", newline="\n") as file:
@@ -81,12 +110,13 @@ def write_all(folder: Path, files: Mapping[str, str]) -> None:
             os.chmod(temporary, 0o666 & ~_umask())
             os.replace(temporary, path)
     except OSError as error:
-        raise Refused(
-            Problem(str(folder), error.strerror or str(error), "a folder that can be written", "choose another -o")
-        ) from None
-    finally:
         for temporary, _ in staged:
             Path(temporary).unlink(missing_ok=True)
+        for path in created:
+            with suppress(OSError):
+                path.rmdir()
+        found = error.strerror or str(error)
+        raise Refused(Problem(str(folder), found, "a folder that can be written", "choose another -o")) from None
 
 
 def _umask() -> int:

@@ -4,10 +4,9 @@ from pathlib import Path
 
 import click
 
-from afterkick.cli.common import HOLDS, json_option, load, print_json, reported, write_all
+from afterkick.cli.common import HOLDS, json_option, load, print_json, reported, targets_option, write_all
 from afterkick.emit import emit_c
 from afterkick.report.notes import emitted_notes
-from afterkick.targets import find_target
 from afterkick.verdict import assess
 
 __all__ = ["command"]
@@ -17,13 +16,12 @@ __all__ = ["command"]
 @click.argument("design", type=click.Path(path_type=Path))
 @click.option("-o", "--output", "folder", required=True, type=click.Path(path_type=Path), help="Folder to write to.")
 @click.option("--templates", type=click.Path(path_type=Path), help="A folder of your own templates, used first.")
-@click.option("--targets", type=click.Path(path_type=Path), help="A folder of your own target profiles.")
+@targets_option
 @json_option
 def command(design: Path, folder: Path, templates: Path | None, targets: Path | None, as_json: bool) -> None:
     """Writes whatever the verdict: judging is what ``check`` is for.  The verdict is said, though."""
     with reported(str(design)) as codes:
-        found = assess(load(design))
-        find_target(found.design.target.name, targets)
+        found = assess(load(design, targets))
         files = emit_c(found.program, notes=emitted_notes(found), templates=templates)
         write_all(folder, files)
         codes.append(HOLDS)

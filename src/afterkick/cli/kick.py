@@ -6,7 +6,8 @@ from pathlib import Path
 import click
 from flint import fmpq
 
-from afterkick.cli.common import HOLDS, json_option, load, print_json, reported
+from afterkick.cli.common import HOLDS, json_option, load, print_json, reported, targets_option
+from afterkick.design.limits import visible
 from afterkick.errors import Problem, Refused
 from afterkick.fixed.direct import direct_program
 from afterkick.model.forms import model_of
@@ -23,11 +24,12 @@ __all__ = ["command"]
 @click.argument("design", type=click.Path(path_type=Path))
 @click.option("--samples", type=click.IntRange(1, 100_000), default=32, show_default=True, help="Rows to print.")
 @click.option("--amplitude", help="Kick of the integer filter, in input units; default: the promised peak.")
+@targets_option
 @json_option
-def command(design: Path, samples: int, amplitude: str | None, as_json: bool) -> None:
+def command(design: Path, samples: int, amplitude: str | None, targets: Path | None, as_json: bool) -> None:
     """The columns share one unit: output units per input unit and second."""
     with reported(str(design)) as codes:
-        found = load(design)
+        found = load(design, targets)
         model = model_of(found)
         sampled = sample(model, found.sampling)
         program = direct_program(sampled, found.arithmetic, found.signals, found.design.name)
@@ -48,4 +50,7 @@ def _amplitude(text: str) -> fmpq:
             return rational(value)
     except InvalidOperation:
         pass
-    raise Refused(Problem("--amplitude", text[:40], "a positive decimal number, in input units"))
+    accepted = "a positive decimal number, in input units"
+    raise Refused(
+        Problem("--amplitude", f"the text {visible(text)}", accepted, "leave it out: the promised peak is used")
+    )

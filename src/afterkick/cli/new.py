@@ -1,5 +1,6 @@
 """``afterkick new NAME``."""
 
+import os
 from pathlib import Path
 
 import click
@@ -24,7 +25,7 @@ def command(name: str, starter: str, folder: Path) -> None:
     with reported("new") as codes:
         text = starter_text(starter, name)
         path = folder / f"{name}.toml"
-        if path.exists():
+        if os.path.lexists(path):
             raise Refused(Problem(str(path), "a file that exists", "a new file", "choose another name or folder"))
         write_all(folder, {path.name: text})
         click.echo(f"wrote {path}; next: afterkick check {path}", err=True)

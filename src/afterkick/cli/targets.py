@@ -5,7 +5,7 @@ from pathlib import Path
 import click
 from attrs import asdict
 
-from afterkick.cli.common import HOLDS, json_option, print_json, reported
+from afterkick.cli.common import HOLDS, json_option, print_json, reported, targets_option
 from afterkick.report.text import targets_text
 from afterkick.targets import load_targets
 
@@ -13,12 +13,12 @@ __all__ = ["command"]
 
 
 @click.command("targets", help="List the target profiles.")
-@click.option("--targets", "folder", type=click.Path(path_type=Path), help="A folder of your own profiles as well.")
+@targets_option
 @json_option
-def command(folder: Path | None, as_json: bool) -> None:
+def command(targets: Path | None, as_json: bool) -> None:
     """One line a profile."""
     with reported("targets") as codes:
-        profiles = load_targets(folder)
+        profiles = load_targets(targets)
         codes.append(HOLDS)
         if as_json:
             print_json({"targets": [asdict(profile) for profile in profiles.values()]})

@@ -1,12 +1,17 @@
 """Program -> C files as text.  The templates place what the views decide."""
 
+from functools import lru_cache
 from pathlib import Path
+from typing import TYPE_CHECKING
 
 from afterkick.emit.selftest import selftest_view
 from afterkick.emit.view import program_view
 from afterkick.errors import Problem, Refused
 from afterkick.fixed.program import Program
 from afterkick.resources import resource_folder
+
+if TYPE_CHECKING:
+    from jinja2 import Environment
 
 __all__ = ["emit_c"]
 
@@ -28,18 +33,8 @@ def emit_c(program: Program, *, notes: tuple[str, ...] = (), templates: Path | N
     :raises Refused: for a program whose sums could overflow, a name that can't be a prefix of C symbols, or a template
         that can't be used.
     """
-    from jinja2 import ChoiceLoader, Environment, FileSystemLoader, StrictUndefined
-
-    folders = [] if templates is None else [_own_folder(templates)]
-    folders.append(resource_folder("templates") / LANGUAGE)
-    environment = Environment(
-        loader=ChoiceLoader([FileSystemLoader(folder) for folder in folders]),
-        undefined=StrictUndefined,
-        autoescape=False,
-        trim_blocks=True,
-        lstrip_blocks=True,
-        keep_trailing_newline=True,
-    )
+    folders = () if templates is None else (_own_folder(templates),)
+    environment = _environment((*folders, resource_folder("templates") / LANGUAGE))
     view = program_view(program, notes)
     test = selftest_view(program, view.symbols)
     files = {}
@@ -52,6 +47,21 @@ def emit_c(program: Program, *, notes: tuple[str, ...] = (), templates: Path | N
             where, found = f"template {LANGUAGE}/{template}", f"{type(error).__name__}: {error}"
             raise Refused(Problem(where, found, "a template that renders", "correct the template")) from error
     return files
+
+
+@lru_cache(maxsize=4)
+def _environment(folders: tuple[Path, ...]) -> "Environment":
+    """The templates of the first folder that has each; read again where a file has changed."""
+    from jinja2 import ChoiceLoader, Environment, FileSystemLoader, StrictUndefined
+
+    return Environment(
+        loader=ChoiceLoader([FileSystemLoader(folder) for folder in folders]),
+        undefined=StrictUndefined,
+        autoescape=False,
+        trim_blocks=True,
+        lstrip_blocks=True,
+        keep_trailing_newline=True,
+    )
 
 
 def _own_folder(templates: Path) -> Path:

@@ -13,7 +13,7 @@ from attrs import frozen
 from flint import arb, fmpq
 from numpy.typing import NDArray
 
-from afterkick.fixed.linear import LinearSystem, RationalResponse
+from afterkick.fixed.linear import LinearSystem, RationalResponse, RoundingSource
 from afterkick.fixed.modal_sums import AbsoluteSum, ModalResponse, absolute_sum, difference, modal_response, values
 from afterkick.fixed.program import Program
 from afterkick.fixed.simulate import simulate
@@ -21,7 +21,7 @@ from afterkick.model.partial_fractions import Mode
 from afterkick.numbers import certified, fraction, is_exactly_zero
 from afterkick.sampling.sampled import Sampled
 
-__all__ = ["Attained", "Bounds", "OutputError", "WordRange", "bounds"]
+__all__ = ["Attained", "Bounds", "OutputError", "WordRange", "WorstCase", "bounds", "worst_input"]
 
 ATTAINING_SAMPLES = 8192
 """Of the worst input that is tried on the simulator."""
@@ -108,54 +108,87 @@ class Bounds:
 def bounds(program: Program, sampled: Sampled, held: Sampled | None) -> Bounds:
     """The bounds of ``program`` against the exact ``sampled`` filter.
 
-    ``held`` is the zero-order-hold sampling of the same model, what the continuous model does to a staircase; None where
-    the filter is that already.
+    ``held`` is the zero-order-hold sampling of the same model, what the continuous model does to a staircase; None
+    where the filter is that already.
     """
-    system = LinearSystem(program)
-    peak = _peak_code(program)
-    to_input = system.responses(None)
-    to_rounding = {source: system.responses(source.dest) for source in system.sources}
-    sums: dict[RationalResponse, AbsoluteSum] = {}
-
-    def total(response: RationalResponse) -> AbsoluteSum:
-        return sums.setdefault(response, absolute_sum(modal_response(response)))
-
-    words = []
-    for name in system.computed:
-        word = program.word(name)
-        reach = peak * total(to_input[name]).upper
-        up = down = 0.0
-        for source, responses in to_rounding.items():
-            response = responses[name]
-            if response.numerator.is_zero():
-                continue
-            size = total(response).upper
-            mean = response.total
-            shift = 0.0 if mean is None else float(fraction(source.mean * mean))
-            up += _up(float(fraction(source.radius)) * size + shift)
-            down += _up(float(fraction(source.radius)) * size - shift)
-        words.append(
-            WordRange(name, _down(-reach - down), _up(reach + up), reach, max(up, down), word.lowest, word.highest)
-        )
-    unbounded = _unbounded(words)
-    noise = sum(total(responses[program.output]).squares for responses in to_rounding.values()) / 12
-    proved = not unbounded and all(word.fits for word in words)
-    output = words[[word.word for word in words].index(program.output)]
+    worst = WorstCase(program)
+    output = worst.ranges[-1]
+    to_output = worst.to_input[program.output]
+    unbounded = _unbounded(worst.ranges)
+    proved = not unbounded and all(word.fits for word in worst.ranges)
     return Bounds(
-        peak,
-        tuple(words),
+        worst.peak_code,
+        worst.ranges,
         unbounded,
-        _output_error(program, sampled, held, to_input[program.output], output, peak) if proved else None,
+        _output_error(program, sampled, held, to_output, output, worst.peak_code) if proved else None,
         float(floor(output.from_rounding)) if proved else None,
-        None if noise == inf else sqrt(noise),
-        _peak_reached(program, to_input[program.output], output, peak) if proved else None,
+        worst.noise_rms,
+        _peak_reached(program, to_output, output, worst.peak_code) if proved else None,
     )
 
 
-def _peak_code(program: Program) -> int:
-    """The promised peak in codes, rounded up; full scale is the code -2^(bits-1)."""
-    scale = 1 << (program.data_bits - 1)
-    return min(ceil(fraction(program.input_format.peak / program.input_format.full_scale * scale)), scale)
+@frozen(eq=False)
+class WorstCase:
+    """The linear responses of a program and the ranges they allow, as long as no word overflows."""
+
+    program: Program
+
+    @cached_property
+    def peak_code(self) -> int:
+        """The promised peak in codes, rounded up; full scale is the code -2^(bits-1)."""
+        program = self.program
+        scale = 1 << (program.data_bits - 1)
+        return min(ceil(fraction(program.input_format.peak / program.input_format.full_scale * scale)), scale)
+
+    @cached_property
+    def system(self) -> LinearSystem:
+        """The exact linear system."""
+        return LinearSystem(self.program)
+
+    @cached_property
+    def to_input(self) -> dict[str, RationalResponse]:
+        """Each computed word's response to the input."""
+        return self.system.responses(None)
+
+    @cached_property
+    def to_rounding(self) -> dict[RoundingSource, dict[str, RationalResponse]]:
+        """Each computed word's response to each rounding."""
+        return {source: self.system.responses(source.dest) for source in self.system.sources}
+
+    @cached_property
+    def ranges(self) -> tuple[WordRange, ...]:
+        """Of every computed word, the output last."""
+        return tuple(self._range(name) for name in self.system.computed)
+
+    @cached_property
+    def noise_rms(self) -> float | None:
+        """Estimate, of the output: white, uniformly distributed, independent rounding errors."""
+        variance = sum(self._sum(responses[self.program.output]).squares for responses in self.to_rounding.values())
+        return None if variance == inf else sqrt(variance / 12)
+
+    def _range(self, name: str) -> WordRange:
+        word = self.program.word(name)
+        reach = self.peak_code * self._sum(self.to_input[name]).upper
+        up = down = 0.0
+        for source, responses in self.to_rounding.items():
+            response = responses[name]
+            if response.numerator.is_zero():
+                continue
+            size = float(fraction(source.radius)) * self._sum(response).upper
+            total = response.total
+            shift = 0.0 if total is None else float(fraction(source.mean * total))
+            up += _up(size + shift)
+            down += _up(size - shift)
+        return WordRange(name, _down(-reach - down), _up(reach + up), reach, max(up, down), word.lowest, word.highest)
+
+    @cached_property
+    def _sums(self) -> dict[RationalResponse, AbsoluteSum]:
+        return {}
+
+    def _sum(self, response: RationalResponse) -> AbsoluteSum:
+        if response not in self._sums:
+            self._sums[response] = absolute_sum(modal_response(response))
+        return self._sums[response]
 
 
 def _up(value: float) -> float:
@@ -166,7 +199,7 @@ def _down(value: float) -> float:
     return -_up(-value)
 
 
-def _unbounded(words: list[WordRange]) -> str:
+def _unbounded(words: tuple[WordRange, ...]) -> str:
     names = [word.word for word in words if word.highest == inf]
     if not names:
         return ""

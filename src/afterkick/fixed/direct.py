@@ -165,11 +165,15 @@ def _delay_problems(delay_samples: int) -> list[Problem]:
     return [
         Problem(
             "sampling",
-            f"the filter delays by {delay_samples} whole samples",
+            f"the filter delays by {_count_text(delay_samples)} whole samples",
             f"at most {LONGEST_DELAY} samples",
             "a lower sampling rate, or take the dead time out of the model and delay the input in your own buffer",
         )
     ]
+
+
+def _count_text(count: int) -> str:
+    return str(count) if count < 10**12 else "more than 10^12"
 
 
 def _scaled(
@@ -183,11 +187,12 @@ def _scaled(
     inner = sections[:-1]
     exponents = [0] * len(sections)
     if scaling != "none" and inner:
-        stable = list(takewhile(lambda section: not section.marginal, inner))
+        stable = list(takewhile(lambda section: not (section.marginal or section.unstable), inner))
         peak = signals.input.peak_or_full_scale / signals.input.full_scale
         norms = _norm_exponents(stable, scaling, peak) if stable else []
-        # An integrator's output has no norm: it is limited by the full scale of the whole filter's output.
-        fallback = -round(math.log2(_to_float(ratio)))
+        # The output of an integrator or an unstable section has no norm: the full scale of the whole filter's output
+        # limits it.
+        fallback = round(math.log2(int(ratio.denominator)) - math.log2(int(ratio.numerator)))
         norms += [None] * (len(inner) - len(stable))
         exponents = [fallback if norm is None else norm for norm in norms] + [0]
     gains = [fmpq(2) ** (before - after) for before, after in zip([0, *exponents], exponents, strict=False)]
@@ -206,10 +211,6 @@ def _float_section(section: ExactSection) -> FloatSection:
     exponent = math.floor(section.largest_numerator_log2() or 0.0)
     b0, b1, b2 = (mid_float(x * fmpq(2) ** -exponent) for x in b)
     return FloatSection((b0, b1, b2), (mid_float(a[1]), mid_float(a[2])), exponent)
-
-
-def _to_float(value: fmpq) -> float:
-    return int(value.numerator) / int(value.denominator)
 
 
 def _plan(section: ExactSection, builder: _Builder) -> _Plan:
@@ -289,7 +290,7 @@ def _refuse_faint(section: ExactSection, plan: _Plan, data_bits: int) -> None:
                 f"arithmetic.coefficient_bits, section {section.number}",
                 f"a full-scale input moves the sum by {most} last places of 2^-{plan.a_bits}",
                 f"at least {ENOUGH_LAST_PLACES} last places",
-                REMEDY,
+                f"a smaller output full scale, {REMEDY}",
             )
         )
 

@@ -54,6 +54,8 @@ class ExactSection:
     pole_at_one: bool
     pole_at_minus_one: bool
     pole_pair_on_circle: bool
+    unstable: bool
+    """Whether the exact section has a pole outside the unit circle."""
 
     @property
     def marginal(self) -> bool:
@@ -133,6 +135,7 @@ def _exact_section(sampled: "Sampled", section: "Section", number: int) -> Exact
         pole_at_one=may_be_marginal and bool((1 + a1 + a2).contains(0)),
         pole_at_minus_one=may_be_marginal and bool((1 - a1 + a2).contains(0)),
         pole_pair_on_circle=may_be_marginal and bool((a2 - 1).contains(0)),
+        unstable=bool(1 + a1 + a2 < 0) or bool(1 - a1 + a2 < 0) or bool(a2 > 1),
     )
 
 
@@ -142,7 +145,7 @@ def significant_bits(integer: int) -> int:
 
 
 def denominator_problems(section: ExactSection, a: Triple, fraction_bits: int) -> list[Problem]:
-    """A pole that left the unit circle's inside by rounding, or a pole near z = 1 that lost its place.
+    """A pole that rounding took to the other side of the unit circle, or a pole near z = 1 that lost its place.
 
     The Jury test of order 2, exact in integers.
     """
@@ -155,10 +158,13 @@ def denominator_problems(section: ExactSection, a: Triple, fraction_bits: int) -
     )
     where = f"{KEY}, section {section.number}"
     stored = f"a1 = {a1}, a2 = {a2} (in 2^-{fraction_bits})"
-    if not stable:
+    if section.unstable and at_one >= 0 and at_minus_one >= 0 and inside >= 0:
+        found = f"no pole is outside the unit circle any more after rounding to {stored}"
+        return [Problem(where, found, "an unstable pole that stays one, as the exact filter has it", REMEDY)]
+    if not stable and not section.unstable:
         found = f"a pole is on or outside the unit circle after rounding to {stored}"
         return [Problem(where, found, "poles inside the unit circle, as the exact filter has them", REMEDY)]
-    if not section.pole_at_one and at_one < ENOUGH_LAST_PLACES:
+    if not section.pole_at_one and abs(at_one) < ENOUGH_LAST_PLACES:
         found = f"1 + a1 + a2 keeps {significant_bits(at_one)} significant bits after rounding to {stored}"
         return [Problem(where, found, "at least 4 significant bits", REMEDY)]
     return []
@@ -173,7 +179,8 @@ def numerator_problems(section: ExactSection, b: Triple, fraction_bits: int) -> 
         f"the largest numerator coefficient keeps {significant_bits(largest)} significant bits "
         f"after rounding to b = {', '.join(map(str, b))} (in 2^-{fraction_bits})"
     )
-    return [Problem(f"{KEY}, section {section.number}", found, "at least 4 significant bits", REMEDY)]
+    remedy = f"a smaller output full scale, {REMEDY}"
+    return [Problem(f"{KEY}, section {section.number}", found, "at least 4 significant bits", remedy)]
 
 
 def widest_fraction_bits(integers: Callable[[int], Sequence[int]], coefficient_bits: int, start: int) -> int:

@@ -1,9 +1,10 @@
 """The filter that the integer coefficients realise, in the same terms as the exact sampled filter.
 
-The output rounding is left out: this is the linear part of what ships, and it is exact, since integers have exact roots.
+The output rounding is left out: this is the linear part of what ships, and it is exact, as integers have exact roots.
 """
 
-from collections.abc import Sequence
+from collections import Counter
+from collections.abc import Hashable, Sequence
 
 from attrs import evolve
 from flint import acb, arb, fmpq, fmpq_poly
@@ -35,9 +36,22 @@ def realised(program: Program, sampled: Sampled) -> Sampled:
         poles = [root for _, a in denominators for root in _roots(a)]
         poles += [ZRoot(acb(0), True, name=0)] * max(0, surplus)
         zeros = [root for _, b in numerators for root in _roots(b)]
-        return PulseTransfer(arb(gain), leading, tuple(zeros), tuple(poles))
+        shared = Counter(pole.name for pole in poles) & Counter(zero.name for zero in zeros)
+        return PulseTransfer(arb(gain), leading, _without(zeros, shared), _without(poles, shared))
 
     return evolve(sampled, attempt=transfer, warnings=())
+
+
+def _without(roots: Sequence[ZRoot], shared: Counter[Hashable]) -> tuple[ZRoot, ...]:
+    """What remains of zeros or poles once those that rounding made equal have cancelled; names decide equality."""
+    left = shared.copy()
+    kept = []
+    for root in roots:
+        if left[root.name]:
+            left[root.name] -= 1
+        else:
+            kept.append(root)
+    return tuple(kept)
 
 
 def _trimmed(coefficients: Sequence[int]) -> tuple[int, list[int]]:

@@ -165,6 +165,8 @@ def kick_data(design: Design, rows: Kick) -> dict[str, Any]:
         "method": design.sampling.method,
         "convention": CONVENTION,
         "dirac": rows.dirac,
+        "improper": rows.improper,
+        "clipped": rows.clipped,
         "amplitude_counts": rows.amplitude_counts,
         "rows": [dict(zip(names, row, strict=True)) for row in zip(*columns, rows.counts.tolist(), strict=True)],
     }

@@ -11,6 +11,10 @@ from afterkick.numbers import fraction, mid_float, to_text
 __all__ = ["ball_text", "closed_form", "exact_text", "number"]
 
 
+_LONGEST_NUMBER = 24
+"""Characters; only an exponent of many digits takes more."""
+
+
 def number(value: float, digits: int = 6) -> str:
     """A float in as few characters as its digits allow."""
     return f"{value + 0.0:.{digits}g}"  # -0.0 + 0.0 is 0.0
@@ -19,8 +23,12 @@ def number(value: float, digits: int = 6) -> str:
 def ball_text(value: arb, digits: int = 6) -> str:
     """A ball's midpoint, also where no float can hold it."""
     middle = mid_float(value)
-    fits = isfinite(middle) and (middle != 0.0 or bool(value.mid().is_zero()))
-    return number(middle, digits) if fits else to_text(value, digits)
+    if isfinite(middle) and (middle != 0.0 or bool(value.mid().is_zero())):
+        return number(middle, digits)
+    text = to_text(value, digits)
+    if len(text) <= _LONGEST_NUMBER:
+        return text
+    return "almost 0" if middle == 0.0 else "beyond any range"
 
 
 def exact_text(value: fmpq) -> str:

@@ -33,6 +33,10 @@ class Kick:
     """The integer filter's answer to the single sample, scaled back."""
     counts: Indices
     """The same in output codes."""
+    improper: bool
+    """Whether h also holds derivatives of the Dirac impulse, which are in none of the columns."""
+    clipped: int
+    """How many output codes are the lowest or highest of the word."""
 
 
 def kick(model: Model, sampled: Sampled, program: Program, samples: int, amplitude: fmpq) -> Kick:
@@ -61,6 +65,7 @@ def kick(model: Model, sampled: Sampled, program: Program, samples: int, amplitu
     stimulus = np.zeros(samples, dtype=np.int64)
     stimulus[0] = code
     counts = simulate(program, stimulus)
+    output = program.word(program.output)
     period = float(fraction(sampled.period_s))
     dirac = mid_float(model.feedthrough())
     unit = float(fraction(program.output_format.full_scale / program.input_format.full_scale)) / code
@@ -79,6 +84,8 @@ def kick(model: Model, sampled: Sampled, program: Program, samples: int, amplitu
         discrete / period,
         integer / period,
         counts,
+        model.relative_degree < 0,
+        int(np.count_nonzero((counts == output.lowest) | (counts == output.highest))),
     )
 
 

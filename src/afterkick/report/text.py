@@ -9,7 +9,7 @@ from afterkick.design.schema import Design
 from afterkick.fixed.program import ProgramSection
 from afterkick.model.model import Model
 from afterkick.model.roots import Roots
-from afterkick.numbers import fraction, mid_float, to_text, working_bits
+from afterkick.numbers import fraction, working_bits
 from afterkick.report.data import REPORT_BITS
 from afterkick.report.formulas import ball_text, closed_form, exact_text, number
 from afterkick.report.layout import LABEL, row
@@ -117,7 +117,7 @@ def _sampling_lines(found: Assessment) -> list[str]:
 
 def _short(value: arb) -> str:
     whole = value.unique_fmpz() if value.is_exact() else None
-    return to_text(value, 9) if whole is None else str(whole)
+    return ball_text(value, 9) if whole is None else str(whole)
 
 
 def _fixed_lines(found: Assessment) -> list[str]:
@@ -210,7 +210,7 @@ def _budget_lines(budget: Sequence[BudgetLine]) -> list[str]:
 
 
 def kick_text(design: Design, rows: Kick) -> str:
-    """A table of the three responses."""
+    """A table of the three responses, what is in none of its columns above it."""
     unit = _impulse_unit(design.signals.output.unit, design.signals.input.unit)
     lines = [
         f"{design.design.name}: impulse response in {unit}; {design.sampling.method} at "
@@ -218,6 +218,10 @@ def kick_text(design: Design, rows: Kick) -> str:
     ]
     if rows.dirac:
         lines.append(f"a Dirac part of weight {number(rows.dirac)} at t = dead time is in none of the columns")
+    if rows.improper:
+        lines.append("the model is improper: derivatives of the Dirac impulse at t = dead time are not in h(t)")
+    if rows.clipped:
+        lines.append(f"{rows.clipped} of the output codes are at the end of the word: a smaller --amplitude shows more")
     lines.append(f"{'n':>6} {'t [s]':>14} {'analytic h(t)':>16} {'sampled h[n]/T':>16} {'integer':>16} {'counts':>12}")
     columns = zip(rows.n, rows.t, rows.analytic, rows.sampled, rows.integer, rows.counts, strict=True)
     lines += [f"{n:>6} {t:>14.8g} {h:>16.8g} {d:>16.8g} {i:>16.8g} {c:>12}" for n, t, h, d, i, c in columns]
@@ -229,7 +233,8 @@ def tour_text(found: Assessment, stop: Mapping[str, Any], seconds: float) -> str
     model, program, shipped = found.model, found.program, found.shipped
     with working_bits(128):
         form = closed_form(model.response_modes(), model.feedthrough())
-    agreement = "equal integer for integer" if stop["equal"] else "DIFFERS from the simulator"
+    agreement = "equal integer for integer" if stop["equal"] else "DIFFERENT from the simulator"
+    compiled = f"compiled by {stop['compiler']}; {stop['samples']} samples {agreement}"
     count = len(program.sections)
     lines = [
         headline(found),
@@ -240,7 +245,7 @@ def tour_text(found: Assessment, stop: Mapping[str, Any], seconds: float) -> str
             f"{program.data_bits}-bit data, {program.coefficient_bits}-bit coefficients, "
             f"{count} section{'s' if count > 1 else ''}{_impulse_text(shipped)}",
         ),
-        row("  C", f"{stop['c_lines']} lines; compiled by {stop['compiler']}; {stop['samples']} samples {agreement}"),
+        row("  C", f"{stop['c_lines']} lines; {'not compiled' if stop['lacking'] else compiled}"),
         row("  time", f"{seconds:.2f} s"),
         "",
     ]

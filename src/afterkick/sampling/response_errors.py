@@ -226,7 +226,7 @@ class _Comparison:
     def _aligned(self) -> tuple[float, Floats]:
         """The delay in samples that explains most, to 1e-4 by golden section, and what remains."""
         count = min(len(self.points.indices), 2048)
-        some = np.unique(np.linspace(0, len(self.points.indices) - 1, count).astype(int))
+        some = np.linspace(0, len(self.points.indices) - 1, count).astype(int)  # steps of at least 1: no repetition
 
         def remains(delay: float, chosen: Indices | slice) -> Floats:
             shifted = _shifted(self.sampled, self.points.indices[chosen], delay, self.exact)

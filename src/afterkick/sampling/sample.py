@@ -9,7 +9,7 @@ from afterkick.design.schema import Sampling
 from afterkick.errors import Problem, Refused
 from afterkick.model.model import Model
 from afterkick.model.roots import Root
-from afterkick.numbers import certified, fraction, mid_float
+from afterkick.numbers import certified, fraction, is_exactly_zero, mid_float
 from afterkick.sampling.holds import INVARIANT_METHODS, invariant_transfer
 from afterkick.sampling.maps import (
     backward_difference_transfer,
@@ -128,18 +128,19 @@ def _unmatchable(model: Model, options: Sampling) -> list[Problem]:
 
 
 def _folded_to_zero(model: Model, options: Sampling) -> list[Problem]:
-    """An undamped mode at a multiple of the rate is a constant to the samples."""
-    if options.method not in (*INVARIANT_METHODS, "matched"):
-        return []
+    """An undamped mode at a multiple of the rate is a constant to the samples; so is a matched zero there."""
+    suspects = [("mode", root) for root in model.poles if options.method in (*INVARIANT_METHODS, "matched")]
+    suspects += [("zero", root) for root in model.zeros if options.method == "matched"]
     return [
         Problem(
             "sampling.rate_hz",
-            f"{options.method} with an undamped mode at {folded[0]:.6g} Hz, a multiple of the rate",
-            "a rate that is not the mode's frequency divided by a whole number",
+            f"{options.method} with an undamped {kind} at {folded[0]:.6g} Hz, a multiple of the rate",
+            f"a rate that is not the {kind}'s frequency divided by a whole number",
             f"a rate above {2 * folded[0]:.6g} Hz",
         )
-        for root in model.poles
-        if model.signs[root] == 0 and (folded := aliased_hz(root, options.rate_hz)) and folded[1] == 0.0
+        for kind, root in suspects
+        if not root.real and is_exactly_zero(root.evaluate().real)
+        if (folded := aliased_hz(root, options.rate_hz)) and folded[1] == 0.0
     ]
 
 

@@ -61,7 +61,7 @@ class Sampled:
 
     def sections(self, bits: int) -> tuple[Section, ...]:
         """The cascade: each coefficient exact or within 2^-bits of the largest of its group, 1+a1+a2 within 2^-bits of
-        itself."""
+        itself, for bits up to 2000: a numerator value that 2048 bits can't tell from zero is taken as zero."""
         return _sections(self, bits)
 
     @cached_property
@@ -126,9 +126,11 @@ class Sampled:
         return samples
 
     def parallel(self, bits: int) -> tuple[arb, tuple[ParallelSection, ...]] | None:
-        """The direct part and first-order-numerator terms of the sum form; None for repeated poles or poles at 0."""
+        """The direct part and first-order-numerator terms of the sum form; None for repeated poles, which a pair at a
+        multiple of half the rate becomes too, or poles at 0."""
         if any(times > 1 for times in self.model.poles.values()) or any(
-            is_exactly_zero(pole.value) for pole in self.transfer().poles
+            is_exactly_zero(pole.value) or (not pole.real and pole.value.imag.contains(0))
+            for pole in self.transfer().poles
         ):
             return None
 
@@ -157,7 +159,12 @@ def _parallel_section(mode: Mode) -> ParallelSection:
 
 def _compute(sampled: Sampled) -> PulseTransfer:
     """The transfer at the present working precision or the lowest one above it that isolates the zeros."""
-    found = certified(sampled.attempt, lambda found: found is not None, "the zeros of the sampled filter")
+    found = certified(
+        sampled.attempt,
+        lambda found: found is not None,
+        "the zeros of the sampled filter (a mode very much faster than the rate may be why: leave it out, or take "
+        "bilinear or matched)",
+    )
     assert found is not None
     return found
 
