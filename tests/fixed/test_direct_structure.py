@@ -10,7 +10,7 @@ from flint import fmpq
 from afterkick.design.schema import Arithmetic, Integrator, Lowpass, Notch, Signal, Signals
 from afterkick.errors import Refused
 from afterkick.fixed import direct_program, quantised_dc_gain
-from afterkick.fixed.program import Move, Sum, Term
+from afterkick.fixed.program import Move, Rounding, Sum, Term
 from afterkick.fixed.quantise import exact_sections
 from afterkick.fixed.ranges import analyse
 from afterkick.fixed.scaling import NORMS, FloatSection, norm_exponents
@@ -237,6 +237,10 @@ def test_faulty_programs_are_found():
     difference = (Term(2**15, "x"), Term(-(2**15), "x_1"))
     assert "a partial sum" not in faults(evolve(first, terms=difference, accumulator_bits=32))
     assert "a partial sum" in faults(evolve(first, terms=(*difference, Term(1, "x_2")), accumulator_bits=32))
+    # the rounding offset alone makes this one too wide, by one
+    halved = evolve(first, terms=difference, accumulator_bits=32, right_shift=16)
+    assert "a partial sum of t1 can reach 2147483648" in faults(halved)
+    assert "a partial sum" not in faults(evolve(halved, rounding=Rounding.FLOOR))
     assert "negative shift" in faults(evolve(first, terms=(Term(1, "x", -1),)))
     assert "shifted right" in faults(evolve(first, right_shift=63))
     assert "no terms" in faults(evolve(first, terms=()))

@@ -136,6 +136,8 @@ def test_promised_accuracy(model: Model, rate: fmpq, method: str, bits: int) -> 
                 assert all(value.rad() <= limit * largest for value in group)
             at_one = section.a_at_one
             assert at_one.is_zero() or at_one.rad() <= 2 * limit * abs(at_one.mid())
+            assert at_one.overlaps(sum(section.a, arb(0)))
+            assert section.b_at_one.overlaps(sum(section.b, arb(0)))
         assert section.a[0] == 1
         assert section.a[0].is_exact()
         if section.order == 1:

@@ -7,6 +7,7 @@ from attrs import asdict
 from flint import arb
 
 from afterkick.design.schema import Design
+from afterkick.errors import Uncertified
 from afterkick.fixed.program import Program
 from afterkick.model.model import Model
 from afterkick.model.roots import Roots
@@ -74,7 +75,8 @@ def _roots_data(roots: Roots) -> list[dict[str, Any]]:
 def _model_data(model: Model) -> dict[str, Any]:
     dc_gain = model.dc_gain_ball()
     proper = model.relative_degree >= 0
-    jumps = [mid_float(value) for value in model.markov_parameters(model.order)[1:]] if proper else None
+    parameters = model.markov_parameters(model.order)[1:] if proper else []
+    jumps = [0.0 if value.contains(0) else mid_float(value) for value in parameters] if proper else None
     before = [float(fraction(value)) for value in model.before] + [0.0] * (model.order - len(model.before))
     with working_bits(128):
         modes = model.response_modes() if proper else ()
@@ -99,7 +101,10 @@ def _model_data(model: Model) -> dict[str, Any]:
 
 
 def _sampling_data(sampled: Sampled) -> dict[str, Any]:
-    parallel = sampled.parallel(REPORT_BITS)
+    try:
+        parallel = sampled.parallel(REPORT_BITS)
+    except Uncertified:  # poles so near z = 0 that their residues are beyond any range
+        parallel = None
     return {
         "rate_hz": float(fraction(sampled.rate_hz)),
         "method": sampled.method,

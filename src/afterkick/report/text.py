@@ -96,7 +96,7 @@ def _jumps_text(model: Model) -> str:
     for i, jump in enumerate(jumps):
         before = arb(model.before[i]) if i < len(model.before) else arb(0)
         mark = "y" + "'" * i if i < 4 else f"y^({i})"
-        if not jump.is_zero():
+        if not jump.contains(0):
             parts.append(f"{mark} from {ball_text(before)} to {ball_text(before + jump)}")
         elif not before.is_zero():
             parts.append(f"{mark} stays {ball_text(before)}")

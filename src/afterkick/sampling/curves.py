@@ -19,6 +19,9 @@ from afterkick.sampling.sampled import Sampled
 
 __all__ = ["Cancelling", "Floats", "Grid", "Indices", "analytic_curve", "analytic_floats", "grid", "sampled_curve"]
 
+_SMALLEST_LOG2 = -1074
+"""Of the smallest positive float."""
+
 Floats = NDArray[np.float64]
 Indices = NDArray[np.int64]
 
@@ -129,8 +132,8 @@ def _usable(modes: Sequence[Mode]) -> bool:
 
 
 def _known(values: Sequence[arb]) -> bool:
-    """Whether the radii are far below the largest value."""
-    peak = arb(0)
+    """Whether the radii are far below the largest value, or below what a float can hold."""
+    peak = arb(2) ** _SMALLEST_LOG2
     for value in values:
         peak = peak.max(abs(value).lower())
     return all(bool(value.rad() <= peak * arb(2) ** -60) for value in values)

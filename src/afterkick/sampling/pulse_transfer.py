@@ -101,7 +101,7 @@ def real_polynomial_roots(coefficients: Sequence[arb]) -> tuple[ZRoot, ...] | No
     if ctx.prec >= COINCIDENCE_BITS:
         for place in (1, -1):
             if sum((c * place**k for k, c in enumerate(coefficients)), arb(0)).contains(0):
-                rest = real_polynomial_roots(_without(coefficients, place))
+                rest = real_polynomial_roots(_divided(coefficients, arb(place)))
                 return None if rest is None else (*rest, ZRoot(acb(place), True))
     if degree == 1:
         return (ZRoot(acb(-coefficients[0] / coefficients[1]), True),)
@@ -110,11 +110,37 @@ def real_polynomial_roots(coefficients: Sequence[arb]) -> tuple[ZRoot, ...] | No
     try:
         found = acb_poly(list(coefficients)).roots(tol=arb(2) ** (40 - ctx.prec // 2))
     except ValueError:
-        return None
+        return _beside_the_origin(coefficients)
     return _classified(found)
 
 
-def _without(coefficients: Sequence[arb], place: int) -> list[arb]:
+def _beside_the_origin(coefficients: Sequence[arb]) -> tuple[ZRoot, ...] | None:
+    """As :func:`real_polynomial_roots` where some roots are below 2^-900, which the root finder can't cope with.
+
+    If |c_m| R^m exceeds the sum of all other |c_k| R^k, m roots are within R of the origin (Rouche's theorem).  As m
+    balls of radius R their product encloses the true factor, coefficient by coefficient.
+    """
+    size = [abs(c).upper() for c in coefficients]
+    for m in range(1, len(coefficients) - 1):
+        pivot = abs(coefficients[m]).lower()
+        if not pivot > 0:
+            continue
+        # large enough for each of the lower coefficients, with room to spare
+        radius = arb(0)
+        for k in range(m):
+            radius = radius.max((4 * m * size[k] / pivot).root(m - k).upper())
+        others = sum((size[k] * radius**k for k in range(len(size)) if k != m), arb(0))
+        if radius < arb(2) ** -900 and others < pivot * radius**m:
+            tiny = ZRoot(acb(arb(0, radius)), True)
+            quotient = list(coefficients)
+            for _ in range(m):
+                quotient = _divided(quotient, tiny.value.real)
+            rest = real_polynomial_roots(quotient)
+            return None if rest is None else (*rest, *[tiny] * m)
+    return None
+
+
+def _divided(coefficients: Sequence[arb], place: arb) -> list[arb]:
     """The quotient by (z - place), which divides the polynomial: Horner's rule, highest power first."""
     quotient, total = [], arb(0)
     for coefficient in reversed(coefficients[1:]):
