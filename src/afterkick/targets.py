@@ -10,6 +10,7 @@ from typing import Any
 
 from attrs import Attribute, fields, frozen
 
+from afterkick.design.limits import nearest
 from afterkick.errors import Problem, Refused
 from afterkick.resources import resource_folder
 
@@ -89,10 +90,8 @@ def find_target(name: str, extra_folder: Path | None = None) -> TargetProfile:
     profiles = load_targets(extra_folder)
     if name in profiles:
         return profiles[name]
-    from difflib import get_close_matches  # only a wrong name pays for it
-
-    near = get_close_matches(name, profiles, n=1)
-    remedy = f'did you mean "{near[0]}"?' if near else "add a profile of your own"
+    near = nearest(name, profiles)
+    remedy = f'did you mean "{near}"?' if near else "add a profile of your own"
     raise Refused(Problem("target.name", f'unknown target "{name}"', ", ".join(profiles), remedy))
 
 
@@ -132,13 +131,12 @@ TABLES = (Compiler, Emulator)
 
 def _table_problems(table: dict[str, Any], schema: Any, where: str, skip: str = "") -> Iterator[Problem]:
     """Unknown keys, missing keys and wrong types, in that order."""
-    from difflib import get_close_matches
-
     known: dict[str, Attribute[Any]] = {field.name: field for field in fields(schema) if field.name != skip}
     for key in table:
         if key not in known:
-            near = get_close_matches(key, known, n=1)
-            yield Problem(f"{where}{key}", "unknown key", ", ".join(known), f"did you mean {near[0]}?" if near else "")
+            near = nearest(key, known)
+            remedy = f"did you mean {near}?" if near else "remove it"
+            yield Problem(f"{where}{key}", "unknown key", ", ".join(known), remedy)
     for key, field in known.items():
         if key not in table:
             yield Problem(f"{where}{key}", "missing", _accepted(field.type), f"add {key}")

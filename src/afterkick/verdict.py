@@ -6,7 +6,8 @@ from attrs import frozen
 from flint import fmpq
 
 from afterkick.design.digest import digest
-from afterkick.design.schema import Design
+from afterkick.design.schema import Design, Sampling
+from afterkick.fixed.bounds import Bounds, bounds
 from afterkick.fixed.direct import direct_program
 from afterkick.fixed.program import Program, quantised_dc_gain
 from afterkick.fixed.realised import realised
@@ -19,8 +20,6 @@ from afterkick.sampling.response_errors import ResponseErrors, response_errors
 __all__ = ["Assessment", "BudgetLine", "assess"]
 
 HOLDS, FALLS_SHORT, UNKNOWN = "holds", "falls short", "unknown"
-
-_LATER = ("worst_case_counts", "noise_counts", "dead_band_counts", "instructions")
 
 
 @frozen
@@ -54,6 +53,7 @@ class Assessment:
     """Of the filter with integer coefficients against the continuous model; the output rounding is left out."""
     dc_gain: fmpq | None
     """Of the integer coefficients, exact; None with an integrator."""
+    bounds: Bounds
     budget: tuple[BudgetLine, ...]
 
     @cached_property
@@ -77,6 +77,7 @@ def assess(design: Design) -> Assessment:
     program = direct_program(sampled, design.arithmetic, design.signals, name, title=design.design.title, digest=mark)
     errors = response_errors(sampled, design.budget.band_hz)
     shipped = response_errors(realised(program, sampled), design.budget.band_hz)
+    proofs = bounds(program, sampled, _held(model, sampled))
     return Assessment(
         design,
         model,
@@ -86,11 +87,19 @@ def assess(design: Design) -> Assessment:
         errors,
         shipped,
         quantised_dc_gain(program),
-        tuple(_budget_lines(design, model, shipped)),
+        proofs,
+        tuple(_budget_lines(design, model, shipped, proofs)),
     )
 
 
-def _budget_lines(design: Design, model: Model, shipped: ResponseErrors) -> list[BudgetLine]:
+def _held(model: Model, sampled: Sampled) -> Sampled | None:
+    """What the model does to a staircase: its zero-order-hold sampling; None where that can't be had."""
+    if sampled.method == "zero-order-hold" or model.relative_degree < 0:
+        return None
+    return sample(model, Sampling(rate_hz=sampled.rate_hz, method="zero-order-hold"))
+
+
+def _budget_lines(design: Design, model: Model, shipped: ResponseErrors, proofs: Bounds) -> list[BudgetLine]:
     """The lines that the file gives, in the order of DESIGN's table; the shipped integers are judged."""
     band = shipped.band
     found: dict[str, tuple[float | None, str]] = {
@@ -99,11 +108,23 @@ def _budget_lines(design: Design, model: Model, shipped: ResponseErrors) -> list
         "phase_deg": _largest(band.phase_deg, band.phase_at_hz),
         "dc_gain_ppm": _dc_gain_ppm(model, shipped),
     }
-    found |= dict.fromkeys(_LATER, (None, "not supported yet"))
+    found |= _proved_figures(proofs) | {"instructions": (None, "not supported yet")}
     limits = {item: getattr(design.budget, item) for item in found}
     return [
         BudgetLine(item, float(fraction(limit)), *found[item]) for item, limit in limits.items() if limit is not None
     ]
+
+
+def _proved_figures(proofs: Bounds) -> dict[str, tuple[float | None, str]]:
+    noise = (proofs.noise_rms, "estimate" if proofs.noise_rms is not None else proofs.why_not)
+    if proofs.output is None:
+        nothing = (None, f"no bound: {proofs.why_not}")
+        return {"worst_case_counts": nothing, "noise_counts": noise, "dead_band_counts": nothing}
+    return {
+        "worst_case_counts": (proofs.output.total, "bound, staircase inputs"),
+        "noise_counts": noise,
+        "dead_band_counts": (proofs.dead_band, "bound"),
+    }
 
 
 def _impulse_figures(shipped: ResponseErrors) -> dict[str, tuple[float | None, str]]:

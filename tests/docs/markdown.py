@@ -11,12 +11,10 @@ FENCE = re.compile(r"^```(?P<info>[^\n`]*)\n(?P<body>.*?)^```$", flags=re.MULTIL
 
 @frozen
 class Block:
-    """A fenced block: what follows the opening fence, the lines, and where they are in the document."""
+    """A fenced block: what follows the opening fence, and the lines."""
 
     info: str
     body: str
-    start: int
-    end: int
 
 
 def document(name: str) -> str:
@@ -24,7 +22,7 @@ def document(name: str) -> str:
 
 
 def blocks(text: str) -> list[Block]:
-    return [Block(found["info"], found["body"], found.start("body"), found.end("body")) for found in FENCE.finditer(text)]
+    return [Block(found["info"], found["body"]) for found in FENCE.finditer(text)]
 
 
 def section(text: str, heading: str) -> str:

@@ -4,17 +4,18 @@ import os
 import subprocess
 import sys
 from importlib import import_module
+from itertools import pairwise
 from typing import Annotated, get_args, get_origin
 
 import attrs
 import click
 import pytest
-from docs.markdown import TOP, blocks, document, names, section, tables
 
 from afterkick.bench.host import find_compiler
 from afterkick.cli import main
 from afterkick.design import schema
 from afterkick.design.limits import Choice
+from docs.markdown import TOP, blocks, document, names, section, tables
 
 UPDATE = "AFTERKICK_UPDATE_GOLDEN"
 README = document("README.md")
@@ -54,7 +55,7 @@ def test_walkthrough(tmp_path):
     listed = blocks(README)
     updated = README
     shown = 0
-    for block, answer in zip(listed, listed[1:], strict=False):
+    for block, answer in pairwise(listed):
         if block.info != "sh runnable":
             continue
         assert answer.info == "text", "a runnable block without what it prints"

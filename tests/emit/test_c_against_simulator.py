@@ -21,6 +21,7 @@ from afterkick.emit import emit_c
 from afterkick.errors import Lacking, Refused
 from afterkick.fixed import simulate
 from afterkick.fixed.program import Program
+from fixed.carried_designs import carried_program, codes_within, relaxed_programs
 from fixed.random_designs import program_of, random_codes, random_program
 
 BATCH = 20
@@ -120,7 +121,10 @@ def programs_of(seeds: tuple[int, ...]) -> list[Program]:
 
 
 def compare(compiler: str, seeds: list[int], programs: list[Program], folder: Path) -> None:
-    inputs = [random_codes(program, seed) for program, seed in zip(programs, seeds, strict=True)]
+    inputs = [
+        codes_within(program, seed) if program.proof else random_codes(program, seed)
+        for program, seed in zip(programs, seeds, strict=True)
+    ]
     for program in programs:
         for name, text in emit_c(program).items():
             (folder / name).write_text(text, encoding="ascii")
@@ -164,6 +168,32 @@ def test_sanitizer_is_awake(compiler, tmp_path):
 
 def test_random_designs_as_cpp_with_the_compiler_of_the_wheel(tmp_path):
     compare("zig c++", SEEDS[0], programs_of(tuple(SEEDS[0])), tmp_path)
+
+
+@functools.cache
+def carried_and_relaxed() -> list[tuple[int, Program]]:
+    """Sixty designs with error feedback of order 1 and 2: half of them as they are, half relaxed."""
+    carried = [(seed, carried_program(seed)) for seed in range(120)]
+    plain = [(seed, program) for seed, program in carried if program is not None][:30]
+    relaxed = [(seed, evolve(after, name=f"relaxed{seed}")) for seed, _, after in relaxed_programs(30)]
+    designs = [design for pair in zip(plain, relaxed, strict=True) for design in pair]
+    return [(seed, program) for seed, program in designs if os.environ.get(SEED) in (None, str(seed))]
+
+
+@pytest.mark.parametrize("start", range(0, 60, BATCH))
+@pytest.mark.parametrize("compiler", ["gcc", "zig cc"])
+def test_random_designs_carried_and_relaxed(compiler, start, tmp_path):
+    if compiler == "gcc" and shutil.which(compiler) is None:
+        pytest.skip("no gcc here; the compiler of the wheel is always used")
+    designs = carried_and_relaxed()[start : start + BATCH]
+    if not designs:
+        pytest.skip("one design alone, which is in the first batch")
+    compare(compiler, [seed for seed, _ in designs], [program for _, program in designs], tmp_path)
+
+
+def test_carried_and_relaxed_designs_as_cpp(tmp_path):
+    designs = carried_and_relaxed()[:BATCH]
+    compare("zig c++", [seed for seed, _ in designs], [program for _, program in designs], tmp_path)
 
 
 def extremes() -> list[Program]:

@@ -17,7 +17,9 @@ from afterkick.emit.literals import container_bits, decimal, integer
 from afterkick.emit.text import comment_lines, harmless
 from afterkick.errors import Refused
 from afterkick.fixed import simulate
+from afterkick.fixed.carry import with_carry
 from afterkick.fixed.program import SignalFormat, Term
+from fixed.carried_designs import relaxed_programs
 from fixed.random_designs import program_of, random_program
 
 GOLDEN = Path(__file__).parent / "golden"
@@ -152,6 +154,29 @@ def test_header_says_what_it_is():
         " - ",
     ):
         assert text in header
+
+
+def test_error_feedback_is_told():
+    files = emit_c(with_carry(demo(), 2))
+    header = re.sub(r"[\s*]+", " ", files["skiff.h"])
+    for text in (" + 2 dropped_y_1 - dropped_y_2) / 2^", "dropped_y = what that division drops", "carry = 2."):
+        assert text in header
+    source = code_without_comments(files["skiff.c"])
+    for line in (
+        "const int32_t quotient_v1 = skiff_nearest_32(sum_v1, 14);",
+        "const int16_t dropped_v1 = (int16_t)(sum_v1 - quotient_v1 * INT32_C(16384));",
+        "const int16_t v1 = (int16_t)skiff_clamp_32(quotient_v1, -INT32_C(32768), INT32_C(32767));",
+        "sum_v1 -= state->dropped_v1_2;",
+    ):
+        assert line in source
+
+
+@pytest.mark.parametrize("index", range(8))
+def test_text_of_carried_and_relaxed_designs(index):
+    for program in relaxed_programs(8)[index][1:]:
+        for name, text in emit_c(program).items():
+            for pattern in FORBIDDEN:
+                assert not re.search(pattern, text, flags=re.MULTILINE), f"{pattern} in {name}"
 
 
 def test_each_coefficient_is_explained():

@@ -10,7 +10,8 @@ from flint import arb, fmpq
 from afterkick.design.schema import Arithmetic, Signal, Signals
 from afterkick.errors import Refused
 from afterkick.fixed import Program, direct_program
-from afterkick.sampling import Section
+from afterkick.sampling import Sampled, Section
+from afterkick.sampling.rational_cascade import rational_cascade
 
 Numbers = Sequence[float | int | fmpq]
 
@@ -19,6 +20,13 @@ def exact(value: float | int | fmpq) -> fmpq:
     if isinstance(value, float):
         return fmpq(*value.as_integer_ratio())
     return fmpq(value)
+
+
+@frozen
+class PlainModel:
+    """As much of a model."""
+
+    dc_gain: fmpq | None = None
 
 
 @frozen(eq=False)
@@ -31,6 +39,11 @@ class PlainSampled:
     marginal: bool = False
     rate_hz: fmpq = fmpq(1000)
     method: str = "zero-order-hold"
+    model: PlainModel = PlainModel()
+
+    def pulse(self, indices: Sequence[int]) -> list[arb]:
+        cascade = [([exact(x) for x in b], [fmpq(1), *(exact(x) for x in a)]) for b, a in self.coefficients]
+        return Sampled(None, None, 0, fmpq(0), lambda: rational_cascade(cascade, fmpq(1))).pulse(indices)
 
     def sections(self, bits: int) -> tuple[Section, ...]:
         return tuple(
@@ -49,11 +62,12 @@ def program_of(
     name: str = "probe",
     signals: Signals | None = None,
     title: str = "",
+    search: bool = False,
     **arithmetic: object,
 ) -> Program:
     """The direct program of sections given as (b, a[1:])."""
     sampled = PlainSampled(tuple(coefficients), delay, marginal)
-    return direct_program(sampled, Arithmetic(**arithmetic), signals or Signals(), name, title=title)
+    return direct_program(sampled, Arithmetic(**arithmetic), signals or Signals(), name, title=title, search=search)
 
 
 def _poles(draw: random.Random, order: int, closest: float) -> list[float]:
@@ -87,7 +101,7 @@ def _zeros(draw: random.Random, order: int) -> list[float]:
     return [gain * x for x in shape]
 
 
-def _attempt(draw: random.Random, name: str) -> Program:
+def _attempt(draw: random.Random, name: str, search: bool) -> Program:
     order = draw.randint(1, 8)
     coefficient_bits = draw.randint(8, 32)
     closest = max(2.0 ** (9 - coefficient_bits), 1e-4)
@@ -108,15 +122,17 @@ def _attempt(draw: random.Random, name: str) -> Program:
         accumulator_bits=draw.choice((None, None, None, 64, 32)),
         scaling=draw.choice(("peak-gain", "two-norm", "infinity", "none")),
     )
-    return direct_program(sampled, arithmetic, signals, name, title=f"random design {name}", digest="0123abcd")
+    return direct_program(
+        sampled, arithmetic, signals, name, title=f"random design {name}", digest="0123abcd", search=search
+    )
 
 
-def random_program(seed: int, name: str | None = None) -> Program:
+def random_program(seed: int, name: str | None = None, search: bool = False) -> Program:
     """The first design of this seed that is not refused."""
     draw = random.Random(seed)
     while True:
         try:
-            return _attempt(draw, name or f"design{seed}")
+            return _attempt(draw, name or f"design{seed}", search)
         except Refused:
             continue
 

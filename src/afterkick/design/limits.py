@@ -18,6 +18,7 @@ from afterkick.numbers import fraction, rational
 __all__ = [
     "HIGHEST_ORDER",
     "Choice",
+    "FeedbackOrder",
     "Identifier",
     "Items",
     "Line",
@@ -196,6 +197,17 @@ class Choice:
 
 
 @frozen
+class FeedbackOrder:
+    """An order of error feedback, or a switch for it."""
+
+    accepted: ClassVar[str] = "true or false, or the order 1 or 2"
+
+    def check(self, value: bool | int) -> None:
+        if value is not False and value not in (1, 2):
+            raise Wrong(describe(value), self.accepted, "choose one of these")
+
+
+@frozen
 class Line:
     """One line of printable text: no control, bidirectional or line-breaking characters.
 
@@ -290,5 +302,5 @@ class Polynomial:
             raise Wrong("a first coefficient of 0", "a first coefficient other than 0", "leave out the leading zeros")
 
 
-ValueLimit: TypeAlias = Number | Whole | Choice | Line | Identifier | TargetName
+ValueLimit: TypeAlias = Number | Whole | Choice | FeedbackOrder | Line | Identifier | TargetName
 ListLimit: TypeAlias = Items | Polynomial

@@ -129,6 +129,7 @@ def _converter() -> Converter:
     hook(int, lambda raw, _: _integer(raw))
     hook(str, lambda raw, _: _of_type(raw, str, "a text", "write it in double quotes"))
     hook(bool, lambda raw, _: _of_type(raw, bool, "true or false", "write it without quotes"))
+    hook(bool | int, lambda raw, _: _of_type(raw, int, "true or false or an integer", "write it without quotes"))
     converter.register_structure_hook_factory(attrs.has, lambda table: _table_hook(converter, table))
     converter.register_structure_hook_func(
         lambda kind: hasattr(kind, "__metadata__"), lambda raw, kind: _limited(converter, raw, kind)

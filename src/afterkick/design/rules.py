@@ -175,8 +175,6 @@ def _arithmetic(table: SimpleNamespace, given: AbstractSet[str]) -> Iterator[Pro
         yield _later("kind", table.kind, '"fixed"', 'write kind = "fixed"')
     if table.structure not in (None, "direct"):
         yield _later("structure", table.structure, '"direct"', 'write structure = "direct"')
-    if table.carry:
-        yield _later("carry", table.carry, "false", "write carry = false")
     if table.clamp is not None:
         low, high = table.clamp
         if low < high:

@@ -12,6 +12,7 @@ from flint import fmpq
 from afterkick.design.limits import (
     HIGHEST_ORDER,
     Choice,
+    FeedbackOrder,
     Identifier,
     Items,
     Line,
@@ -378,11 +379,16 @@ class Arithmetic:
     structure: Annotated[str, Choice(STRUCTURES)] = "direct"
     rounding: Annotated[str, Choice(("nearest", "floor", "even"))] = "nearest"
     overflow: Annotated[str, Choice(("saturate", "wrap"))] = "saturate"
-    carry: bool = False
+    carry: Annotated[bool | int, FeedbackOrder()] = False
+    """The order of the error feedback: False or 1 or 2; True becomes 1."""
     state_bits: Annotated[int, Whole(8, 64)] | None = None
     accumulator_bits: Annotated[int, Choice((32, 64))] | None = None
     scaling: Annotated[str, Choice(SCALINGS)] = "peak-gain"
     clamp: Annotated[tuple[fmpq, fmpq], Items(2, 2, "numbers, [low, high]")] | None = None
+
+    def __attrs_post_init__(self) -> None:
+        if self.carry is True:
+            object.__setattr__(self, "carry", 1)
 
 
 @frozen

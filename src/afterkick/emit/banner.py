@@ -1,6 +1,7 @@
 """The comments at the top of the emitted files: what they realise, and how far to trust it."""
 
 from collections.abc import Iterator
+from typing import Protocol
 
 from flint import fmpq
 
@@ -9,7 +10,16 @@ from afterkick.emit.literals import decimal
 from afterkick.emit.text import comment_lines
 from afterkick.fixed.program import Overflow, Program, ProgramSection, Rounding, Sum, quantised_dc_gain
 
-__all__ = ["header_banner", "selftest_banner", "source_banner"]
+__all__ = [
+    "CAUTIONS",
+    "Titled",
+    "first_lines",
+    "header_banner",
+    "listed",
+    "quantity",
+    "selftest_banner",
+    "source_banner",
+]
 
 ROUNDING_TEXT = {
     Rounding.NEAREST: "to the nearest integer, ties up",
@@ -26,29 +36,43 @@ CAUTIONS = (
 )
 
 
+class Titled(Protocol):
+    """What the first lines of a file say of a program of any arithmetic."""
+
+    @property
+    def name(self) -> str: ...
+
+    @property
+    def title(self) -> str: ...
+
+    @property
+    def digest(self) -> str: ...
+
+
 def header_banner(program: Program, notes: tuple[str, ...]) -> tuple[str, ...]:
     """Lines for NAME.h: the whole story."""
     return (
-        *_first_lines(program, ".h", program.title),
+        *first_lines(program, ".h", program.title),
         *_filter(program),
         *_signals(program),
         *_options(program),
-        *_listed("Accuracy", notes),
-        *_listed("Cautions", CAUTIONS),
+        *listed("Accuracy", notes),
+        *listed("Cautions", CAUTIONS),
     )
 
 
-def source_banner(program: Program) -> tuple[str, ...]:
+def source_banner(program: Titled) -> tuple[str, ...]:
     """Lines for NAME.c."""
-    return _first_lines(program, ".c", program.title)
+    return first_lines(program, ".c", program.title)
 
 
-def selftest_banner(program: Program, ending: str) -> tuple[str, ...]:
+def selftest_banner(program: Titled, ending: str) -> tuple[str, ...]:
     """Lines for the files of the self-test."""
-    return _first_lines(program, f"_selftest{ending}", f"self-test of {program.title}")
+    return first_lines(program, f"_selftest{ending}", f"self-test of {program.title}")
 
 
-def _first_lines(program: Program, ending: str, title: str) -> tuple[str, ...]:
+def first_lines(program: Titled, ending: str, title: str) -> tuple[str, ...]:
+    """Which file this is, where it comes from, whose it is."""
     origin = f", design {program.digest}" if program.digest else ""
     return (
         *comment_lines(f"{program.name}{ending}: {title}"),
@@ -60,7 +84,8 @@ def _first_lines(program: Program, ending: str, title: str) -> tuple[str, ...]:
     )
 
 
-def _listed(heading: str, items: tuple[str, ...]) -> tuple[str, ...]:
+def listed(heading: str, items: tuple[str, ...]) -> tuple[str, ...]:
+    """A heading and its items; nothing where there are none."""
     lines = [line for item in items for line in comment_lines(item, "  ")]
     return ("", f"{heading}:", *lines) if lines else ()
 
@@ -86,6 +111,26 @@ def _filter(program: Program) -> Iterator[str]:
     for step in program.steps:
         if isinstance(step, Sum):
             yield from comment_lines(_equation(step, program.word(step.dest).bits), "  ")
+            if step.residue is not None:
+                kept = f"{step.residue} = what that division drops, before the word's limits act"
+                yield from comment_lines(kept, "  ")
+    yield from _proof(program)
+
+
+def _proof(program: Program) -> Iterator[str]:
+    """The bounds that took the saturation away, each beside what its word holds."""
+    if program.proof is None:
+        return
+    lowest, highest = -program.proof.peak_code, min(program.proof.peak_code, program.word(program.input).highest)
+    yield ""
+    yield from comment_lines(
+        f"Proved, from a reset on and for input codes from {lowest} to {highest}: these words stay within the limits "
+        "below, so nothing checks them."
+    )
+    for entry in program.proof.ranges:
+        word = program.word(entry.word)
+        limits = f"{entry.word}: {entry.lowest} to {entry.highest}; the word holds {word.lowest} to {word.highest}"
+        yield from comment_lines(limits, "  ")
 
 
 def _transfer(section: ProgramSection) -> str:
@@ -120,7 +165,8 @@ def _per(program: Program) -> str:
     return f" {top or '1'} per {bottom or '1'}" if top != bottom else ""
 
 
-def _quantity(value: fmpq, unit: str) -> str:
+def quantity(value: fmpq, unit: str) -> str:
+    """A number with its unit."""
     return f"{decimal(value)} {unit}".rstrip()
 
 
@@ -128,10 +174,10 @@ def _signals(program: Program) -> Iterator[str]:
     yield ""
     for name, signal in (("Input", program.input_format), ("Output", program.output_format)):
         full_scale = 1 << (program.data_bits - 1)
-        peak = f"; promised to stay within {_quantity(signal.peak, signal.unit)}"
+        peak = f"; promised to stay within {quantity(signal.peak, signal.unit)}"
         yield from comment_lines(
             f"{name}: {program.data_bits}-bit two's complement, Q{program.data_bits - 1}, codes {-full_scale} to "
-            f"{full_scale - 1}; {full_scale} stands for {_quantity(signal.full_scale, signal.unit)}"
+            f"{full_scale - 1}; {full_scale} stands for {quantity(signal.full_scale, signal.unit)}"
             f"{peak if signal.peak != signal.full_scale else ''}."
         )
 
@@ -141,5 +187,6 @@ def _options(program: Program) -> Iterator[str]:
     yield from comment_lines(
         f"Options: data_bits = {program.data_bits}, coefficient_bits = {program.coefficient_bits}, "
         f"structure = {program.structure}, rounding = {program.rounding.value}, "
-        f"overflow = {program.overflow.value}, scaling = {program.scaling}."
+        f"overflow = {program.overflow.value}, scaling = {program.scaling}"
+        f"{f', carry = {program.carry}' if program.carry else ''}."
     )

@@ -5,6 +5,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING
 
 from afterkick.emit.selftest import selftest_view
+from afterkick.emit.symbols import Symbols
 from afterkick.emit.view import program_view
 from afterkick.errors import Problem, Refused
 from afterkick.fixed.program import Program
@@ -13,7 +14,7 @@ from afterkick.resources import resource_folder
 if TYPE_CHECKING:
     from jinja2 import Environment
 
-__all__ = ["emit_c"]
+__all__ = ["emit_c", "rendered"]
 
 LANGUAGE = "c"
 FILES = {
@@ -70,3 +71,22 @@ def _own_folder(templates: Path) -> Path:
         found = f"{templates} holds no folder {LANGUAGE}"
         raise Refused(Problem("templates", found, f"a folder with templates in {LANGUAGE}/", f"make {folder}"))
     return folder
+
+
+def rendered(files: dict[str, str], symbols: Symbols, templates: Path | None, **context: object) -> dict[str, str]:
+    """The templates that ``files`` gives for the endings of file names, as text.
+
+    :raises Refused: for a template that can't be used.
+    """
+    folders = () if templates is None else (_own_folder(templates),)
+    environment = _environment((*folders, resource_folder("templates") / LANGUAGE))
+    texts = {}
+    for ending, template in files.items():
+        try:
+            texts[symbols.file(ending)] = environment.get_template(template).render(context)
+        except Exception as error:  # a template is a program of the user's own: it can raise anything
+            if templates is None:
+                raise
+            where, found = f"template {LANGUAGE}/{template}", f"{type(error).__name__}: {error}"
+            raise Refused(Problem(where, found, "a template that renders", "correct the template")) from error
+    return texts

@@ -6,6 +6,7 @@ from afterkick.emit.banner import selftest_banner
 from afterkick.emit.symbols import Symbols
 from afterkick.emit.view import container
 from afterkick.fixed.program import Program
+from afterkick.fixed.ranges import Interval, analyse
 from afterkick.fixed.simulate import simulate
 
 __all__ = ["SelfTestView", "selftest_view"]
@@ -54,7 +55,9 @@ class SelfTestView:
 def selftest_view(program: Program, symbols: Symbols) -> SelfTestView:
     """Stimuli and what must come out."""
     word = program.word(program.input)
-    parts = _parts(word.bits)
+    limits = analyse(program).proved.get(word.name, Interval.of_word(word.bits))
+    noise_bits = min(word.bits, (-limits.lowest).bit_length())
+    parts = _parts(limits, noise_bits)
     inputs = [code for part in parts for code in part]
     expected = [int(code) for part in parts for code in simulate(program, part)]
     return SelfTestView(
@@ -73,27 +76,27 @@ def selftest_view(program: Program, symbols: Symbols) -> SelfTestView:
         seed=_unsigned(SEED),
         multiplier=_unsigned(MULTIPLIER),
         increment=_unsigned(INCREMENT),
-        unused_bits=32 - word.bits,
-        highest=word.highest,
-        mask=_unsigned((1 << word.bits) - 1),
+        unused_bits=32 - noise_bits,
+        highest=(1 << (noise_bits - 1)) - 1,
+        mask=_unsigned((1 << noise_bits) - 1),
         check_factor=CHECK_FACTOR,
-        checksum=_unsigned(_checksum(simulate(program, _noise(word.bits, LONG_RUN)).tolist())),
+        checksum=_unsigned(_checksum(simulate(program, _noise(noise_bits, LONG_RUN)).tolist())),
     )
 
 
-def _parts(bits: int) -> list[list[int]]:
+def _parts(limits: Interval, noise_bits: int) -> list[list[int]]:
     """Impulse, step, full-scale alternation in blocks that excite slow sections too, and noise of an eighth."""
-    highest, lowest = (1 << (bits - 1)) - 1, -(1 << (bits - 1))
+    highest, lowest = limits.highest, limits.lowest
     impulse = [highest] + [0] * (PART - 1)
     step = [lowest] * PART
     alternation = [highest if (n & 1) == 0 else lowest for n in range(PART // 2)]
     alternation += [highest if (n & 4) == 0 else lowest for n in range(PART // 2)]
-    noise = [code >> 3 for code in _noise(bits, PART)]
+    noise = [code >> 3 for code in _noise(noise_bits, PART)]
     return [impulse, step, alternation, noise]
 
 
 def _noise(bits: int, count: int) -> list[int]:
-    """Full-scale codes from the highest bits of the generator."""
+    """Codes of that many bits, the highest of the generator."""
     codes, seed = [], SEED
     for _ in range(count):
         seed = (seed * MULTIPLIER + INCREMENT) % WORD

@@ -6,7 +6,7 @@ from afterkick.emit.banner import header_banner, source_banner
 from afterkick.emit.literals import container_bits, integer, signed
 from afterkick.emit.symbols import Symbols
 from afterkick.fixed.program import Coefficient, Overflow, Program, ProgramSection, Role, Rounding, Sum, Term, Word
-from afterkick.fixed.ranges import require_valid
+from afterkick.fixed.ranges import Interval, require_valid
 
 __all__ = ["BlockView", "CheckView", "HelperView", "LineView", "MemberView", "ProgramView", "container", "program_view"]
 
@@ -91,7 +91,9 @@ def program_view(program: Program, notes: tuple[str, ...]) -> ProgramView:
     """
     symbols = Symbols.of(program.name)
     source = program.word(program.input)
-    printer = _Printer(program, symbols, require_valid(program).may_overflow)
+    analysis = require_valid(program)
+    accepted = analysis.proved.get(source.name, Interval.of_word(source.bits))
+    printer = _Printer(program, symbols, analysis.may_overflow)
     blocks = tuple(printer.block(number) for number in range(1, len(program.sections) + 1))
     width = container_bits(source.bits)
     return ProgramView(
@@ -102,8 +104,8 @@ def program_view(program: Program, notes: tuple[str, ...]) -> ProgramView:
         data_bits=source.bits,
         input=symbols.local(program.input),
         output=symbols.local(program.output),
-        lowest=source.lowest,
-        highest=source.highest,
+        lowest=accepted.lowest,
+        highest=accepted.highest,
         delay_samples=program.delay_samples,
         members=tuple(_member(word, symbols) for word in program.words if word.role is Role.STATE),
         helpers=printer.helpers(),
@@ -157,9 +159,19 @@ class _Printer:
             if i == 0:
                 code = f"int{step.accumulator_bits}_t {total} = {'-' if negative else ''}{product};"
             else:
-                code = f"{total} {'-' if negative else '+'}= {product};"
+                # the type of the sum is wide enough for the negative of any word, which the word's own need not be
+                operand = self._read(term.word) if term.factor == -1 else product
+                code = f"{total} {'-' if negative else '+'}= {operand};"
             lines.append(LineView(code, _term_comment(section, term)))
-        return [*lines, LineView(f"{self._store(step.dest)} = {self._narrowed(step, total)};")]
+        quotient = total
+        if step.right_shift:
+            bits = step.accumulator_bits
+            quotient = f"{self._call(ROUNDING_HELPER[step.rounding], bits)}({total}, {step.right_shift})"
+        if step.residue is not None:
+            lines.append(LineView(f"const int{step.accumulator_bits}_t quotient_{step.dest} = {quotient};"))
+            quotient = f"quotient_{step.dest}"
+            lines.append(LineView(f"{self._store(step.residue)} = {self._residue(step, total, quotient)};"))
+        return [*lines, LineView(f"{self._store(step.dest)} = {self._narrowed(step, quotient)};")]
 
     def _product(self, term: Term, bits: int) -> tuple[str, bool]:
         """The product of a term without its sign, and whether it is subtracted.
@@ -174,11 +186,19 @@ class _Printer:
             factors.append(integer(1 << term.shift, bits))
         return " * ".join([*factors, word]), term.coefficient < 0
 
-    def _narrowed(self, step: Sum, total: str) -> str:
+    def _residue(self, step: Sum, total: str, quotient: str) -> str:
+        """What the shift dropped.
+
+        The product is the sum rounded to a multiple of 2^right_shift, which the range analysis covers upwards; the
+        lowest value of the type is such a multiple, so it can't overflow downwards either.
+        """
+        bits, residue = step.accumulator_bits, self.program.word(str(step.residue))
+        value = f"{total} - {quotient} * {integer(1 << step.right_shift, bits)}"
+        return f"({container(residue.bits)})({value})" if container_bits(residue.bits) < bits else value
+
+    def _narrowed(self, step: Sum, value: str) -> str:
+        """The quotient after the overflow rule, in the type of its word."""
         bits, dest = step.accumulator_bits, self.program.word(step.dest)
-        value = total
-        if step.right_shift:
-            value = f"{self._call(ROUNDING_HELPER[step.rounding], bits)}({value}, {step.right_shift})"
         if step.dest in self.may_overflow and step.overflow is Overflow.SATURATE:
             ends = f"{integer(dest.lowest, bits)}, {integer(dest.highest, bits)}"
             value = f"{self._call('clamp', bits)}({value}, {ends})"
@@ -202,7 +222,8 @@ class _Printer:
 
 def _term_comment(section: ProgramSection, term: Term) -> str:
     found = next((c for c in section.coefficients if c.name == term.label), None)
-    return "" if found is None else _coefficient_comment(found)
+    texts = ["" if found is None else _coefficient_comment(found), term.note]
+    return "; ".join(text for text in texts if text)
 
 
 def _coefficient_comment(coefficient: Coefficient) -> str:

@@ -17,7 +17,7 @@ from afterkick.fixed.linear import LinearSystem, RationalResponse, RoundingSourc
 from afterkick.fixed.modal_sums import AbsoluteSum, ModalResponse, absolute_sum, difference, modal_response, values
 from afterkick.fixed.program import Program
 from afterkick.fixed.simulate import simulate
-from afterkick.model.partial_fractions import Mode
+from afterkick.model.partial_fractions import Mode, modes_known
 from afterkick.numbers import certified, fraction, is_exactly_zero
 from afterkick.sampling.sampled import Sampled
 
@@ -54,13 +54,13 @@ class OutputError:
     """The rounded coefficients against the exact sampled filter."""
     rounding: float
     """The roundings of all sums."""
-    sampling: float | None
-    """The sampled filter against the continuous model, at the samples, for staircase inputs; None: no bound exists."""
+    sampling: float
+    """The sampled filter against the continuous model, at the samples, for staircase inputs."""
 
     @property
-    def total(self) -> float | None:
+    def total(self) -> float:
         """Against the continuous model, for staircase inputs."""
-        return None if self.sampling is None else self.coefficients + self.rounding + self.sampling
+        return _up(self.coefficients + self.rounding + self.sampling)
 
 
 @frozen
@@ -99,6 +99,13 @@ class Bounds:
         """The words that may overflow."""
         return tuple(word for word in self.words if not word.fits)
 
+    @property
+    def why_not(self) -> str:
+        """Why nothing is proved; empty where it is."""
+        if self.unbounded:
+            return self.unbounded
+        return ", ".join(f"{word.word} may overflow" for word in self.overflowing)
+
     @cached_property
     def proved(self) -> bool:
         """Whether no word ever overflows."""
@@ -112,9 +119,9 @@ def bounds(program: Program, sampled: Sampled, held: Sampled | None) -> Bounds:
     where the filter is that already.
     """
     worst = WorstCase(program)
-    output = worst.ranges[-1]
+    output = next(word for word in worst.ranges if word.word == program.output)
     to_output = worst.to_input[program.output]
-    unbounded = _unbounded(worst.ranges)
+    unbounded = _unbounded(worst.ranges) if sampled.stable else "the sampled filter is not stable"
     proved = not unbounded and all(word.fits for word in worst.ranges)
     return Bounds(
         worst.peak_code,
@@ -157,7 +164,7 @@ class WorstCase:
 
     @cached_property
     def ranges(self) -> tuple[WordRange, ...]:
-        """Of every computed word, the output last."""
+        """Of every computed word."""
         return tuple(self._range(name) for name in self.system.computed)
 
     @cached_property
@@ -216,11 +223,7 @@ def _exact_response(sampled: Sampled, scale: fmpq) -> ModalResponse:
         return first, tuple(Mode(m.pole, m.real, tuple(c * scale for c in m.coefficients)) for m in modes)
 
     def precise(found: tuple[tuple[arb, ...], tuple[Mode, ...]]) -> bool:
-        return all(
-            (m.pole.is_exact() or int(m.pole.rel_accuracy_bits()) >= 100)
-            and all(int(c.rel_accuracy_bits()) >= 100 for c in m.coefficients)
-            for m in found[1]
-        )
+        return modes_known(found[1])
 
     return ModalResponse(*certified(compute, precise, "the exact pulse response"))
 
@@ -232,17 +235,15 @@ def _output_error(
     response: RationalResponse,
     output: WordRange,
     peak: int,
-) -> OutputError | None:
-    if not sampled.stable:
-        return None
+) -> OutputError:
     scale = program.input_format.full_scale / program.output_format.full_scale
     late = RationalResponse(response.numerator.right_shift(program.delay_samples), response.denominator)
     exact = _exact_response(sampled, scale)
     coefficients = peak * absolute_sum(difference(modal_response(late), exact)).upper
-    sampling: float | None = 0.0
+    sampling = 0.0
     if held is not None:
-        sampling = peak * absolute_sum(difference(exact, _exact_response(held, scale))).upper
-    return OutputError(_up(coefficients), output.from_rounding, sampling if sampling is None else _up(sampling))
+        sampling = _up(peak * absolute_sum(difference(exact, _exact_response(held, scale))).upper)
+    return OutputError(_up(coefficients), output.from_rounding, sampling)
 
 
 def _peak_reached(program: Program, response: RationalResponse, output: WordRange, peak: int) -> Attained:

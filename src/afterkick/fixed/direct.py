@@ -5,28 +5,34 @@ output is the history of the next one's input, so the two share it.  Numerator a
 their own.  Where the numerator's is the finer one, its sum is brought to the denominator's scale first.
 """
 
-import math
-from itertools import takewhile
 from typing import TYPE_CHECKING
 
-from attrs import evolve, frozen
+from attrs import frozen
 from flint import fmpq
 
 from afterkick.errors import Problem, Refused
-from afterkick.fixed.narrow import rounding_offset
+from afterkick.fixed.cascade import (
+    SCALING_BITS,
+    Builder,
+    delay_problems,
+    delayed,
+    finished,
+    moves,
+    renamed,
+    scaled,
+    signal_words,
+)
+from afterkick.fixed.kept import exact_dc_gain
 from afterkick.fixed.program import (
-    Move,
-    Overflow,
     Program,
     ProgramSection,
     Role,
-    Rounding,
-    SignalFormat,
     Step,
     Sum,
     Term,
     Word,
 )
+from afterkick.fixed.pulse_grid import Integers
 from afterkick.fixed.quantise import (
     ENOUGH_LAST_PLACES,
     REMEDY,
@@ -38,40 +44,39 @@ from afterkick.fixed.quantise import (
     numerator_fraction_bits,
     numerator_problems,
 )
-from afterkick.fixed.ranges import Interval, largest_partial_sum, require_valid, sum_range
-from afterkick.fixed.scaling import FloatSection, norm_exponents
-from afterkick.numbers import mid_float, working_bits
+from afterkick.fixed.ranges import Interval, sum_range
+from afterkick.fixed.search import searched
+from afterkick.numbers import working_bits
 
 if TYPE_CHECKING:
     from afterkick.design.schema import Arithmetic, Signals
     from afterkick.sampling.sampled import Sampled
 
-__all__ = ["LONGEST_DELAY", "direct_program"]
-
-LONGEST_DELAY = 256
-"""Samples of whole delay that are built as a chain of words."""
-SCALING_BITS = 128
+__all__ = ["direct_program"]
 
 
 def direct_program(
-    sampled: "Sampled", arithmetic: "Arithmetic", signals: "Signals", name: str, *, title: str = "", digest: str = ""
+    sampled: "Sampled",
+    arithmetic: "Arithmetic",
+    signals: "Signals",
+    name: str,
+    *,
+    title: str = "",
+    digest: str = "",
+    search: bool = True,
 ) -> Program:
     """The integer filter that realises H * (input full scale / output full scale) as a direct form I cascade.
+
+    Without ``search`` every coefficient is the nearest integer, but for the exact zeros and poles that are kept.
 
     :raises Refused: with all problems of all sections: a coefficient that lost its meaning, a sum that no accumulator
         holds, a delay that is too long, or an option that this structure doesn't know.
     """
-    problems = _unsupported(arithmetic) + _delay_problems(sampled.delay_samples)
+    problems = _unsupported(arithmetic) + delay_problems(sampled.delay_samples)
     if problems:
         raise Refused(problems)
-    sections, exponents = _scaled(exact_sections(sampled), arithmetic.scaling, signals)
-    builder = _Builder(
-        arithmetic.data_bits,
-        arithmetic.coefficient_bits,
-        Rounding(arithmetic.rounding),
-        Overflow(arithmetic.overflow),
-        arithmetic.accumulator_bits,
-    )
+    sections, exponents = scaled(exact_sections(sampled), arithmetic.scaling, signals)
+    builder = Builder.of(arithmetic)
     plans: list[_Plan] = []
     for section in sections:
         try:
@@ -80,49 +85,18 @@ def direct_program(
             problems += refusal.problems
     if problems:
         raise Refused(problems)
-    program = Program(
-        name=name,
-        title=title or name,
-        sections=_wire(sections, plans, exponents, builder, sampled.delay_samples),
-        input="x",
-        output="y",
-        data_bits=arithmetic.data_bits,
-        coefficient_bits=arithmetic.coefficient_bits,
-        structure="direct",
-        rounding=builder.rounding,
-        overflow=builder.overflow,
-        scaling=arithmetic.scaling,
-        rate_hz=sampled.rate_hz,
-        method=sampled.method,
-        delay_samples=sampled.delay_samples,
-        input_format=SignalFormat(signals.input.unit, signals.input.full_scale, signals.input.peak_or_full_scale),
-        output_format=SignalFormat(signals.output.unit, signals.output.full_scale, signals.output.full_scale),
+    if search:
+        sections, plans = _searched(sections, plans, builder, _dc_gain(sampled, signals))
+    return finished(
+        _wire(sections, plans, exponents, builder, sampled.delay_samples),
+        "direct",
+        sampled,
+        arithmetic,
+        signals,
+        name,
+        title=title,
         digest=digest,
     )
-    require_valid(program)
-    return program
-
-
-@frozen
-class _Builder:
-    """What all sections have in common."""
-
-    data_bits: int
-    coefficient_bits: int
-    rounding: Rounding
-    overflow: Overflow
-    accumulator_bits: int | None
-
-    @property
-    def widest(self) -> int:
-        """The widest accumulator that may be used."""
-        return self.accumulator_bits or 64
-
-    def width(self, terms: tuple[Term, ...], ranges: dict[str, Interval], right_shift: int) -> int | None:
-        """The accumulator for a sum: the given one, else 32 bits where they suffice, else 64; None where none does."""
-        magnitude = largest_partial_sum(terms, ranges, rounding_offset(right_shift, self.rounding))
-        choices = (self.accumulator_bits,) if self.accumulator_bits else (32, 64)
-        return next((bits for bits in choices if magnitude < 1 << (bits - 1)), None)
 
 
 @frozen
@@ -159,61 +133,7 @@ def _unsupported(arithmetic: "Arithmetic") -> list[Problem]:
     ]
 
 
-def _delay_problems(delay_samples: int) -> list[Problem]:
-    if delay_samples <= LONGEST_DELAY:
-        return []
-    return [
-        Problem(
-            "sampling",
-            f"the filter delays by {_count_text(delay_samples)} whole samples",
-            f"at most {LONGEST_DELAY} samples",
-            "a lower sampling rate, or take the dead time out of the model and delay the input in your own buffer",
-        )
-    ]
-
-
-def _count_text(count: int) -> str:
-    return str(count) if count < 10**12 else "more than 10^12"
-
-
-def _scaled(
-    sections: tuple[ExactSection, ...], scaling: str, signals: "Signals"
-) -> tuple[tuple[ExactSection, ...], list[int]]:
-    """The sections with their gains, and e of each: up to its output the whole is scaled by 2^-e.
-
-    Powers of two between the sections; the last one undoes them and carries the exact ratio of the full scales.
-    """
-    ratio = signals.input.full_scale / signals.output.full_scale
-    inner = sections[:-1]
-    exponents = [0] * len(sections)
-    if scaling != "none" and inner:
-        stable = list(takewhile(lambda section: not (section.marginal or section.unstable), inner))
-        peak = signals.input.peak_or_full_scale / signals.input.full_scale
-        norms = _norm_exponents(stable, scaling, peak) if stable else []
-        # The output of an integrator or an unstable section has no norm: the full scale of the whole filter's output
-        # limits it.
-        fallback = round(math.log2(int(ratio.denominator)) - math.log2(int(ratio.numerator)))
-        norms += [None] * (len(inner) - len(stable))
-        exponents = [fallback if norm is None else norm for norm in norms] + [0]
-    gains = [fmpq(2) ** (before - after) for before, after in zip([0, *exponents], exponents, strict=False)]
-    gains[-1] *= ratio
-    return tuple(evolve(section, gain=gain) for section, gain in zip(sections, gains, strict=True)), exponents
-
-
-def _norm_exponents(sections: list[ExactSection], scaling: str, peak: fmpq) -> list[int | None]:
-    with working_bits(SCALING_BITS):
-        scaled = [evolve(sections[0], gain=peak), *sections[1:]]
-        return norm_exponents([_float_section(section) for section in scaled], scaling)
-
-
-def _float_section(section: ExactSection) -> FloatSection:
-    b, a = section.evaluate()
-    exponent = math.floor(section.largest_numerator_log2() or 0.0)
-    b0, b1, b2 = (mid_float(x * fmpq(2) ** -exponent) for x in b)
-    return FloatSection((b0, b1, b2), (mid_float(a[1]), mid_float(a[2])), exponent)
-
-
-def _plan(section: ExactSection, builder: _Builder) -> _Plan:
+def _plan(section: ExactSection, builder: Builder) -> _Plan:
     """The finest binary points whose sums fit the accumulator.
 
     :raises Refused: where a coefficient loses its meaning or no accumulator holds the worst case.
@@ -233,7 +153,11 @@ def _plan(section: ExactSection, builder: _Builder) -> _Plan:
             break
         plan = _attempt(b, b_bits, a, a_bits, builder)
         if isinstance(plan, _Plan):
-            _refuse_faint(section, plan, builder.data_bits)
+            faint = _faintness(plan, builder.data_bits)
+            if faint:
+                where = f"arithmetic.coefficient_bits, section {section.number}"
+                enough = f"at least {ENOUGH_LAST_PLACES} last places"
+                raise Refused(Problem(where, faint, enough, f"a smaller output full scale, {REMEDY}"))
             return plan
         narrowed = True
         if plan == "numerator":
@@ -251,7 +175,31 @@ def _plan(section: ExactSection, builder: _Builder) -> _Plan:
     )
 
 
-def _attempt(b: Triple, b_bits: int, a: Triple, a_bits: int, builder: _Builder) -> "_Plan | str":
+def _dc_gain(sampled: "Sampled", signals: "Signals") -> fmpq | None:
+    """The exact gain at z = 1 of the codes, where it is known."""
+    gain = exact_dc_gain(sampled)
+    return None if gain is None else gain * signals.input.full_scale / signals.output.full_scale
+
+
+def _searched(
+    sections: tuple[ExactSection, ...], plans: list[_Plan], builder: Builder, dc_gain: fmpq | None
+) -> tuple[tuple[ExactSection, ...], list[_Plan]]:
+    """The sections, with the gains they now have, and their plans after the search."""
+
+    def plan(section: ExactSection, one: Integers) -> _Plan | None:
+        problems = denominator_problems(section, one.a, one.a_bits) + numerator_problems(section, one.b, one.b_bits)
+        if problems or max(map(abs, one.a + one.b)) > 1 << (builder.coefficient_bits - 1):
+            return None
+        found = _attempt(one.b, one.b_bits, one.a, one.a_bits, builder)
+        return found if isinstance(found, _Plan) and not _faintness(found, builder.data_bits) else None
+
+    plain = [Integers(one.b, one.b_bits, one.a, one.a_bits) for one in plans]
+    chosen = searched(sections, plain, dc_gain, lambda section, one: plan(section, one) is not None)
+    found = [(section, plan(section, one)) for section, one in chosen]
+    return tuple(section for section, _ in found), [one for _, one in found if one is not None]
+
+
+def _attempt(b: Triple, b_bits: int, a: Triple, a_bits: int, builder: Builder) -> "_Plan | str":
     """The section's sums at these binary points, or which of them, "numerator" or "feedback", is too wide."""
     whole = Interval.of_word(builder.data_bits)
     ranges = dict.fromkeys(("x0", "x1", "x2", "y1", "y2"), whole)
@@ -278,28 +226,24 @@ def _attempt(b: Triple, b_bits: int, a: Triple, a_bits: int, builder: _Builder) 
     return _Plan(b, b_bits, a, a_bits, tuple(sums), temporary_bits)
 
 
-def _refuse_faint(section: ExactSection, plan: _Plan, data_bits: int) -> None:
-    """A numerator so small that it hardly moves the sum, however long its integers are."""
+def _faintness(plan: _Plan, data_bits: int) -> str:
+    """What is wrong with a numerator so small that it hardly moves the sum, however long its integers are."""
     if plan.temporary_bits is None:
-        return
+        return ""
     partial = plan.sums[0]
     most = sum(abs(term.factor) for term in partial.terms) << (data_bits - 1) >> partial.right_shift
-    if most < ENOUGH_LAST_PLACES:
-        raise Refused(
-            Problem(
-                f"arithmetic.coefficient_bits, section {section.number}",
-                f"a full-scale input moves the sum by {most} last places of 2^-{plan.a_bits}",
-                f"at least {ENOUGH_LAST_PLACES} last places",
-                f"a smaller output full scale, {REMEDY}",
-            )
-        )
+    return (
+        f"a full-scale input moves the sum by {most} last places of 2^-{plan.a_bits}"
+        if most < ENOUGH_LAST_PLACES
+        else ""
+    )
 
 
 def _wire(
     sections: tuple[ExactSection, ...],
     plans: list[_Plan],
     exponents: list[int],
-    builder: _Builder,
+    builder: Builder,
     delay_samples: int,
 ) -> tuple[ProgramSection, ...]:
     """The words and steps of all sections, and how they hang together.
@@ -317,21 +261,21 @@ def _wire(
         depths[k] = max(depths[k], delays[k] + plan.history("x"))
         depths[k + 1] = plan.history("y")
     groups = [
-        _signal_words(*signal, builder.data_bits) for signal in zip(signals, roles, binary_points, depths, strict=True)
+        signal_words(*signal, builder.data_bits) for signal in zip(signals, roles, binary_points, depths, strict=True)
     ]
     wired = []
     for k, (section, plan) in enumerate(zip(sections, plans, strict=True)):
-        names = {f"x{i}": _delayed(signals[k], delays[k] + i) for i in range(3)}
-        names |= {f"y{i}": _delayed(signals[k + 1], i) for i in range(3)} | {"t": f"t{k + 1}"}
+        names = {f"x{i}": delayed(signals[k], delays[k] + i) for i in range(3)}
+        names |= {f"y{i}": delayed(signals[k + 1], i) for i in range(3)} | {"t": f"t{k + 1}"}
         words = groups[k + 1]
         if plan.temporary_bits is not None:
             scale = binary_points[k + 1] + plan.a_bits
             words = (Word(f"t{k + 1}", plan.temporary_bits, scale, Role.TEMPORARY), *words)
         if k == 0:
             words = groups[0] + words
-        steps: tuple[Step, ...] = tuple(_renamed(step, names) for step in plan.sums) + _moves(signals[k], depths[k])
+        steps: tuple[Step, ...] = tuple(renamed(step, names) for step in plan.sums) + moves(signals[k], depths[k])
         if k == count - 1:
-            steps += _moves(signals[count], depths[count])
+            steps += moves(signals[count], depths[count])
         with working_bits(SCALING_BITS):
             coefficients = section.coefficients(plan.b, plan.b_bits, plan.a, plan.a_bits)
         wired.append(
@@ -350,21 +294,3 @@ def _wire(
             )
         )
     return tuple(wired)
-
-
-def _delayed(signal: str, samples: int) -> str:
-    return f"{signal}_{samples}" if samples else signal
-
-
-def _signal_words(signal: str, role: Role, fraction_bits: int, depth: int, bits: int) -> tuple[Word, ...]:
-    past = (Word(_delayed(signal, i), bits, fraction_bits, Role.STATE) for i in range(1, depth + 1))
-    return (Word(signal, bits, fraction_bits, role), *past)
-
-
-def _moves(signal: str, depth: int) -> tuple[Move, ...]:
-    return tuple(Move(_delayed(signal, i), _delayed(signal, i - 1)) for i in range(depth, 0, -1))
-
-
-def _renamed(step: Sum, names: dict[str, str]) -> Sum:
-    terms = tuple(evolve(term, word=names[term.word]) for term in step.terms)
-    return evolve(step, dest=names[step.dest], terms=terms)

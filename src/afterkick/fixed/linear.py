@@ -1,7 +1,8 @@
 """A Program as an exact linear system: what the input and each rounding do to each word.
 
 Every Sum is the exact linear form of its terms plus a rounding error within known limits, as long as nothing overflows;
-a Move is itself.  All coefficients are rational, so the responses and their transfer functions are too.
+its residue, if it is kept, is that error with the opposite sign, at the scale of the sum; a Move is itself.  All
+coefficients are rational, so the responses and their transfer functions are too.
 """
 
 from functools import cached_property
@@ -9,7 +10,8 @@ from functools import cached_property
 from attrs import frozen
 from flint import fmpq, fmpq_poly
 
-from afterkick.fixed.program import Move, Program, Role, Rounding, Sum
+from afterkick.fixed.narrow import residue_limits
+from afterkick.fixed.program import Move, Program, Role, Sum
 
 __all__ = ["LinearSystem", "RationalResponse", "RoundingSource"]
 
@@ -121,18 +123,16 @@ class LinearSystem:
                     continue
                 total = sum((term.factor * words[term.word] for term in step.terms), fmpq(0))
                 total /= fmpq(2) ** step.right_shift
-                if n == 0 and step.dest == source:
-                    total += 1
+                error = 1 if n == 0 and step.dest == source else 0
+                if step.residue is not None:
+                    words[step.residue] = fmpq(-error << step.right_shift)
+                total += error
                 words[step.dest] = total
                 histories[step.dest].append(total)
         return histories
 
 
 def _rounding_limits(step: Sum) -> tuple[fmpq, fmpq]:
-    """Of stored less exact, in last places.  Nearest with ties up: a tie adds one half, a hair below subtracts it."""
-    place = fmpq(1, 2) ** step.right_shift
-    if step.rounding is Rounding.FLOOR:
-        return place - 1, fmpq(0)
-    if step.rounding is Rounding.EVEN:
-        return fmpq(-1, 2), fmpq(1, 2)
-    return place - fmpq(1, 2), fmpq(1, 2)
+    """Of stored less exact, in last places: the opposite of what is dropped."""
+    lowest, highest = residue_limits(step.right_shift, step.rounding)
+    return fmpq(-highest, 1 << step.right_shift), fmpq(-lowest, 1 << step.right_shift)

@@ -15,7 +15,7 @@ from flint import acb, arb, fmpq, fmpq_poly
 from numpy.typing import NDArray
 
 from afterkick.fixed.linear import RationalResponse
-from afterkick.model.partial_fractions import Mode, expand, polynomial_taylor
+from afterkick.model.partial_fractions import Mode, expand, modes_known, polynomial_taylor
 from afterkick.model.roots import RADIANS, algebraic_roots
 from afterkick.numbers import certified, working_bits
 
@@ -70,7 +70,7 @@ def modal_response(response: RationalResponse) -> ModalResponse:
         return expand(polynomial_taylor(top), every)[: len(poles)]
 
     return ModalResponse(
-        tuple(arb(value) for value in response.samples(extra + 1)), certified(compute, _precise, "a pulse response")
+        tuple(arb(value) for value in response.samples(extra + 1)), certified(compute, modes_known, "a pulse response")
     )
 
 
@@ -139,17 +139,6 @@ def _extended(response: ModalResponse, length: int) -> Iterator[arb]:
                     value += coefficient * comb(n - 1, j) * mode.pole ** (n - 1 - j)
             total += value.real if mode.real else 2 * value.real
         yield total
-
-
-def _precise(modes: Sequence[Mode]) -> bool:
-    """Whether poles have 100 bits, and coefficients relative to the largest."""
-    largest = max((abs(c).upper() for mode in modes for c in mode.coefficients), default=arb(0))
-    limit = largest * arb(2) ** -100
-    return all(
-        (mode.pole.is_exact() or int(mode.pole.rel_accuracy_bits()) >= 100)
-        and all(bool(c.rad() <= limit) for c in mode.coefficients)
-        for mode in modes
-    )
 
 
 def _block(modes: Sequence[Mode], start: int) -> tuple[Floats, float]:

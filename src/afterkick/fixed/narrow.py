@@ -10,7 +10,7 @@ from numpy.typing import NDArray
 
 from afterkick.fixed.program import Overflow, Rounding
 
-__all__ = ["fit", "rounding_offset", "saturate", "shift_right", "wrap"]
+__all__ = ["fit", "residue_limits", "rounding_offset", "saturate", "shift_right", "wrap"]
 
 Value = TypeVar("Value", int, NDArray[np.int64])
 
@@ -30,6 +30,17 @@ def shift_right(value: Value, right_shift: int, rounding: Rounding) -> Value:
     if rounding is Rounding.NEAREST:
         return (value + half) >> right_shift
     return (value + (half - 1) + ((value >> right_shift) & 1)) >> right_shift
+
+
+def residue_limits(right_shift: int, rounding: Rounding) -> tuple[int, int]:
+    """The lowest and highest of value - (quotient << right_shift): what the shift drops."""
+    if right_shift == 0:
+        return 0, 0
+    if rounding is Rounding.FLOOR:
+        return 0, (1 << right_shift) - 1
+    half = 1 << (right_shift - 1)
+    # A tie to even is rounded either way.
+    return -half, half if rounding is Rounding.EVEN else half - 1
 
 
 def saturate(value: Value, bits: int) -> Value:

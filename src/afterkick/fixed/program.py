@@ -5,10 +5,10 @@ their linear systems from it, the C is printed from it: so they can't disagree. 
 that returns a Program.
 """
 
-from collections.abc import Iterator
+from collections.abc import Iterable, Iterator
 from enum import Enum
 
-from attrs import field, frozen
+from attrs import evolve, field, frozen
 from flint import fmpq
 
 __all__ = [
@@ -17,6 +17,8 @@ __all__ = [
     "Overflow",
     "Program",
     "ProgramSection",
+    "Proof",
+    "ProvedRange",
     "Role",
     "Rounding",
     "SignalFormat",
@@ -24,7 +26,9 @@ __all__ = [
     "Sum",
     "Term",
     "Word",
+    "dependencies",
     "quantised_dc_gain",
+    "with_accumulator",
 ]
 
 
@@ -90,6 +94,8 @@ class Term:
     shift: int = 0
     label: str = ""
     """Which of the section's coefficients this is, for readers."""
+    note: str = ""
+    """What sets the factor apart from that coefficient, for readers."""
 
     @property
     def factor(self) -> int:
@@ -102,7 +108,8 @@ class Sum:
     """``dest = narrow((sum of the terms) >> right_shift)``.
 
     The sum is exact in ``accumulator_bits`` (32 or 64) bits; the shift rounds by ``rounding``; what the destination
-    can't hold is treated by ``overflow``.
+    can't hold is treated by ``overflow``.  What the shift drops, sum - (quotient << right_shift), goes into the word
+    ``residue``, if there is one: the quotient is taken before the overflow rule acts, so that no excess is in it.
     """
 
     dest: str
@@ -111,6 +118,7 @@ class Sum:
     right_shift: int
     rounding: Rounding
     overflow: Overflow
+    residue: str | None = None
 
 
 @frozen
@@ -174,6 +182,23 @@ class SignalFormat:
 
 
 @frozen
+class ProvedRange:
+    """What a computed word can hold at most, proved; both ends are in the word's own last places."""
+
+    word: str
+    lowest: int
+    highest: int
+
+
+@frozen
+class Proof:
+    """Ranges that hold from a reset on, for ever, while the input codes stay within ``peak_code``."""
+
+    peak_code: int
+    ranges: tuple[ProvedRange, ...]
+
+
+@frozen
 class Program:
     """Everything that the shipped integers do, and what the printers say about it."""
 
@@ -197,6 +222,10 @@ class Program:
     output_format: SignalFormat
     digest: str = ""
     """Of the design; printed, never interpreted."""
+    carry: int = 0
+    """How many past residues the error feedback uses: 0 is none."""
+    proof: Proof | None = None
+    """A word in it is neither saturated nor wrapped; the simulator refuses a run that leaves its range."""
     _words: dict[str, Word] = field(init=False, repr=False, eq=False)
 
     @_words.default
@@ -217,6 +246,35 @@ class Program:
     def word(self, name: str) -> Word:
         """The word of that name; KeyError where there is none."""
         return self._words[name]
+
+
+def dependencies(program: Program, names: Iterable[str]) -> frozenset[str]:
+    """The words ``names`` and every word that has an influence on them, over any number of samples."""
+    sources: dict[str, set[str]] = {word.name: set() for word in program.words}
+    for step in program.steps:
+        read = {term.word for term in step.terms} if isinstance(step, Sum) else {step.source}
+        sources[step.dest] |= read
+        if isinstance(step, Sum) and step.residue is not None:
+            sources[step.residue] |= read
+    found: set[str] = set()
+    waiting = set(names)
+    while waiting:
+        found |= waiting
+        waiting = set().union(*(sources[name] for name in waiting)) - found
+    return frozenset(found)
+
+
+def with_accumulator(program: Program, dest: str, bits: int) -> Program:
+    """The program with another accumulator for the sum that writes ``dest``."""
+
+    def changed(section: ProgramSection) -> ProgramSection:
+        steps = (
+            evolve(step, accumulator_bits=bits) if isinstance(step, Sum) and step.dest == dest else step
+            for step in section.steps
+        )
+        return evolve(section, steps=tuple(steps))
+
+    return evolve(program, sections=tuple(changed(section) for section in program.sections))
 
 
 def quantised_dc_gain(program: Program) -> fmpq | None:

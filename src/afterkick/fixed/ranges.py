@@ -1,6 +1,7 @@
 """Interval arithmetic over a Program: what every sum can reach, whatever the states hold.
 
-Rigorous: states range over their whole words, words written in the same sample over what their step can produce.
+Rigorous: states range over their whole words, words written in the same sample over what their step can produce; both
+only over what is proved of them, if the program carries a proof.
 Every partial sum is covered in any order of the terms, the rounding offset included, since a signed overflow is
 undefined in C.
 """
@@ -8,13 +9,15 @@ undefined in C.
 from attrs import frozen
 
 from afterkick.errors import Problem, Refused
-from afterkick.fixed.narrow import rounding_offset, shift_right
-from afterkick.fixed.program import Program, Role, Sum, Term
+from afterkick.fixed.narrow import residue_limits, rounding_offset, shift_right
+from afterkick.fixed.program import Move, Program, Role, Step, Sum, Term
 
 __all__ = ["Analysis", "Interval", "SumRange", "analyse", "largest_partial_sum", "require_valid", "sum_range"]
 
 ACCUMULATOR_WIDTHS = (32, 64)
-WIDEST_DATA = 32
+WIDEST_SIGNAL = 32
+WIDEST_INNER = 64
+"""Of states and temporaries."""
 
 
 @frozen
@@ -76,6 +79,8 @@ class Analysis:
     """Why the program is not valid; empty where it is."""
     may_overflow: frozenset[str]
     """The words whose overflow rule can come into play; for all others it is proved that it can't."""
+    proved: dict[str, Interval]
+    """What the program's proof says of its words, the input and delayed copies included."""
 
 
 def analyse(program: Program) -> Analysis:
@@ -85,45 +90,55 @@ def analyse(program: Program) -> Analysis:
     """
     unsound = _word_faults(program)
     if unsound:
-        return Analysis(unsound, frozenset(word.name for word in program.words))
+        return Analysis(unsound, frozenset(word.name for word in program.words), {})
     found: list[str] = []
     may_overflow: set[str] = set()
-    known = {word.name: Interval.of_word(word.bits) for word in program.words}
+    proved = _proved(program)
+    known = {word.name: Interval.of_word(word.bits) for word in program.words} | proved
     ranges = {word.name: known[word.name] for word in program.words if word.role in (Role.INPUT, Role.STATE)}
     written: set[str] = set()
     for step in program.steps:
         sources = [term.word for term in step.terms] if isinstance(step, Sum) else [step.source]
-        missing = [name for name in (*sources, step.dest) if name not in known]
+        dests = _dests(step)
+        missing = [name for name in (*sources, *dests) if name not in known]
         unwritten = [name for name in sources if name in known and name not in ranges]
         found += [f"the step that writes {step.dest} uses the unknown word {name}" for name in missing]
         found += [f"the step that writes {step.dest} reads {name} before it is written" for name in unwritten]
         if missing or unwritten:
             break
         dest = program.word(step.dest)
-        if dest.role is Role.INPUT:
-            found.append(f"the input {dest.name} is written")
-        if dest.role is not Role.STATE and dest.name in written:
-            found.append(f"{dest.name} is written twice")
-        written.add(dest.name)
+        for name in dests:
+            role = program.word(name).role
+            if role is Role.INPUT:
+                found.append(f"the input {name} is written")
+            if role is not Role.STATE and name in written:
+                found.append(f"{name} is written twice")
+            written.add(name)
         if isinstance(step, Sum):
-            faults = _sum_faults(step, ranges)
+            faults = _sum_faults(step, ranges) + _residue_faults(step, program)
             if faults:
                 found += faults
                 break
             result = sum_range(step, ranges).result
-            if result not in known[dest.name]:
+            if dest.name in proved:
+                result = known[dest.name]
+            elif result not in known[dest.name]:
                 may_overflow.add(dest.name)
                 result = known[dest.name]
         else:
             if dest.bits != program.word(step.source).bits:
                 found.append(f"{step.source} and {dest.name} differ in width")
             result = ranges[step.source]
+        if isinstance(step, Sum) and step.residue is not None:
+            residue = program.word(step.residue)
+            dropped = Interval(*residue_limits(step.right_shift, step.rounding))
+            ranges[residue.name] = known[residue.name] if residue.role is Role.STATE else dropped
         # A state read later in the same sample may hold the new value, in the next one the old: keep the whole word.
         ranges[dest.name] = known[dest.name] if dest.role is Role.STATE else result
     else:
         if program.output not in written:
             found.append(f"the output {program.output} is never written")
-    return Analysis(tuple(found), frozenset(may_overflow))
+    return Analysis(tuple(found), frozenset(may_overflow), proved)
 
 
 def require_valid(program: Program) -> Analysis:
@@ -146,14 +161,46 @@ def _word_faults(program: Program) -> tuple[str, ...]:
     found += [f"the word {name} is declared twice" for name in sorted({n for n in names if names.count(n) > 1})]
     roles = {word.name: word.role for word in program.words}
     for word in program.words:
-        widest = 64 if word.role is Role.TEMPORARY else WIDEST_DATA
+        widest = WIDEST_INNER if word.role in (Role.STATE, Role.TEMPORARY) else WIDEST_SIGNAL
         if not 2 <= word.bits <= widest:
             found.append(f"the word {word.name} has {word.bits} bits, not 2 to {widest}")
     if roles.get(program.input) is not Role.INPUT:
         found.append(f"the input {program.input} is not an input word")
     if roles.get(program.output) is not Role.OUTPUT:
         found.append(f"the output {program.output} is not an output word")
+    computed = {step.dest for step in program.steps if isinstance(step, Sum)}
+    for entry in program.proof.ranges if program.proof else ():
+        if entry.word not in computed or entry.word not in roles:
+            found.append(f"the proof speaks of {entry.word}, which no sum writes")
+        elif Interval(entry.lowest, entry.highest) not in Interval.of_word(program.word(entry.word).bits):
+            found.append(f"the range proved of {entry.word} is wider than the word")
+        elif not entry.lowest <= 0 <= entry.highest:
+            found.append(f"the range proved of {entry.word} is without the 0 of a reset")
     return tuple(found)
+
+
+def _dests(step: Step) -> tuple[str, ...]:
+    """The words that a step writes."""
+    residue = step.residue if isinstance(step, Sum) else None
+    return (step.dest,) if residue is None else (step.dest, residue)
+
+
+def _proved(program: Program) -> dict[str, Interval]:
+    if program.proof is None:
+        return {}
+    peak, word = program.proof.peak_code, program.word(program.input)
+    found = {word.name: Interval(max(-peak, word.lowest), min(peak, word.highest))}
+    found |= {entry.word: Interval(entry.lowest, entry.highest) for entry in program.proof.ranges}
+    # A word that a move alone writes holds what its source held, or the 0 of a reset.
+    written = [name for step in program.steps for name in _dests(step)]
+    copies = [step for step in program.steps if isinstance(step, Move) and written.count(step.dest) == 1]
+    known = 0
+    while known < len(found):
+        known = len(found)
+        for step in reversed(copies):
+            if step.source in found:
+                found[step.dest] = found[step.source]
+    return found
 
 
 def _sum_faults(step: Sum, ranges: dict[str, Interval]) -> list[str]:
@@ -172,3 +219,16 @@ def _sum_faults(step: Sum, ranges: dict[str, Interval]) -> list[str]:
     if magnitude > (1 << (step.accumulator_bits - 1)) - 1:
         found.append(f"a partial sum of {step.dest} can reach {magnitude}, more than {step.accumulator_bits} bits hold")
     return found
+
+
+def _residue_faults(step: Sum, program: Program) -> list[str]:
+    if step.residue is None:
+        return []
+    word = program.word(step.residue)
+    if word.role is Role.OUTPUT or word.name == step.dest:
+        return [f"the residue of {step.dest} goes into {word.name}, which is no word of its own"]
+    if step.right_shift == 0:
+        return [f"the sum of {step.dest} keeps a residue but drops nothing"]
+    if Interval(*residue_limits(step.right_shift, step.rounding)) not in Interval.of_word(word.bits):
+        return [f"the residue of {step.dest} needs more than the {word.bits} bits of {word.name}"]
+    return []

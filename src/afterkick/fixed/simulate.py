@@ -14,7 +14,7 @@ from numpy.typing import NDArray
 from afterkick.errors import Problem, Refused
 from afterkick.fixed.narrow import fit, shift_right
 from afterkick.fixed.program import Program, Role, Sum
-from afterkick.fixed.ranges import Analysis, analyse
+from afterkick.fixed.ranges import Analysis, Interval, analyse
 
 __all__ = ["Trace", "simulate", "trace"]
 
@@ -41,7 +41,7 @@ class Trace:
 def simulate(program: Program, inputs: NDArray[np.integer[Any]] | Sequence[int]) -> NDArray[np.int64]:
     """The output codes for input codes of shape (n,) or (n, m): n samples of m stimuli, each from a reset state.
 
-    :raises Refused: for inputs that are not integers within the input word.
+    :raises Refused: for inputs that are not integers within the input word, or that contradict the program's proof.
     """
     return trace(program, inputs).outputs
 
@@ -52,8 +52,9 @@ def trace(
     state: dict[str, int] | None = None,
 ) -> Trace:
     """As :func:`simulate`, with the final state and the overflow counts; starts from ``state``, zero where absent."""
-    codes = _checked(program, inputs)
     analysis = analyse(program)
+    word = program.word(program.input)
+    codes = _checked(inputs, analysis.proved.get(word.name, Interval.of_word(word.bits)))
     columns = codes[:, None] if codes.ndim == 1 else codes
     machine = _Machine(program, analysis)
     start = {name: int(value) for name, value in (state or {}).items()}
@@ -69,14 +70,13 @@ def trace(
     return Trace(np.ascontiguousarray(outputs.reshape(codes.shape)), final, machine.overflows())
 
 
-def _checked(program: Program, inputs: NDArray[np.integer[Any]] | Sequence[int]) -> NDArray[np.int64]:
+def _checked(inputs: NDArray[np.integer[Any]] | Sequence[int], limits: Interval) -> NDArray[np.int64]:
     codes = np.asarray(inputs)
-    word = program.word(program.input)
-    accepted = f"integers from {word.lowest} to {word.highest}, of shape (n,) or (n, m)"
+    accepted = f"integers from {limits.lowest} to {limits.highest}, of shape (n,) or (n, m)"
     if codes.ndim not in (1, 2) or (codes.size and not np.issubdtype(codes.dtype, np.integer)):
         found = f"an array of shape {codes.shape} and type {codes.dtype}"
         raise Refused(Problem("inputs", found, accepted, "round the samples to input codes"))
-    if codes.size and (codes.min() < word.lowest or codes.max() > word.highest):
+    if codes.size and (codes.min() < limits.lowest or codes.max() > limits.highest):
         found = f"codes from {codes.min()} to {codes.max()}"
         raise Refused(Problem("inputs", found, accepted, "scale or clip the samples"))
     return codes.astype(np.int64)
@@ -90,12 +90,15 @@ class _Machine:
         self.state_names = [word.name for word in program.words if word.role is Role.STATE]
         self.input, self.output = self.index[program.input], self.index[program.output]
         self.counts = {name: 0 for name in self.index if name in analysis.may_overflow}
+        self.limits = {word.name: Interval.of_word(word.bits) for word in program.words} | analysis.proved
         self.steps: list[Callable[[Values], None]] = []
         moves: list[tuple[int, int]] = []
         for step in program.steps:
             if isinstance(step, Sum):
                 self._flush(moves)
                 self.steps.append(self._sum(program, step, step.dest in analysis.may_overflow or bool(analysis.faults)))
+                if step.dest in analysis.proved:
+                    self.steps.append(self._keeps_proof(step.dest))
             else:
                 moves.append((self.index[step.dest], self.index[step.source]))
         self._flush(moves)
@@ -116,6 +119,7 @@ class _Machine:
         factors = tuple((term.factor, self.index[term.word]) for term in step.terms)
         (first, first_word), rest = factors[0], factors[1:]
         dest, name = self.index[step.dest], step.dest
+        residue = None if step.residue is None else self.index[step.residue]
         bits, right_shift, rounding, overflow = (
             program.word(step.dest).bits,
             step.right_shift,
@@ -128,7 +132,9 @@ class _Machine:
             total = first * words[first_word]
             for factor, word in rest:
                 total = total + factor * words[word]
-            total = shift_right(total, right_shift, rounding)
+            exact, total = total, shift_right(total, right_shift, rounding)
+            if residue is not None:
+                words[residue] = exact - (total << right_shift)
             if may_overflow:
                 stored = fit(total, bits, overflow)
                 changed = stored != total
@@ -139,11 +145,28 @@ class _Machine:
 
         return add
 
+    def _keeps_proof(self, name: str) -> Callable[[Values], None]:
+        """A proved word has no overflow rule: where it leaves its range, the run ends."""
+        index, limits = self.index[name], self.limits[name]
+
+        def check(words: Values) -> None:
+            outside = (words[index] < limits.lowest) | (words[index] > limits.highest)
+            if outside is True or (outside is not False and outside.any()):
+                found = f"{name} leaves the range from {limits.lowest} to {limits.highest} that was proved"
+                remedy = "start from a reset, or run the program without the proof"
+                raise Refused(Problem("program", found, "a run as the proof assumes it", remedy))
+
+        return check
+
     def _start(self, zero: Any, state: dict[str, int]) -> Values:
         unknown = sorted(set(state) - set(self.state_names))
         if unknown:
             accepted = ", ".join(self.state_names) or "no state"
             raise Refused(Problem("state", f"the unknown words {', '.join(unknown)}", accepted))
+        for name, value in state.items():
+            limits = self.limits[name]
+            if not limits.lowest <= value <= limits.highest:
+                raise Refused(Problem("state", f"{name} = {value}", f"{limits.lowest} to {limits.highest}"))
         return [zero + state.get(name, 0) for name in self.index]
 
     def run_one(self, codes: list[int], state: dict[str, int]) -> tuple[list[int], dict[str, int]]:

@@ -9,7 +9,7 @@ from collections.abc import Callable, Sequence
 from attrs import frozen
 from flint import acb, arb, fmpq, fmpq_poly
 
-__all__ = ["Mode", "evaluate", "expand", "polynomial_taylor", "product_taylor"]
+__all__ = ["Mode", "evaluate", "expand", "modes_known", "polynomial_taylor", "product_taylor"]
 
 
 @frozen
@@ -20,6 +20,20 @@ class Mode:
     """Imaginary part >= 0; a complex pole stands for its conjugate too, whose coefficients are conjugates."""
     real: bool
     coefficients: tuple[acb, ...]
+
+
+def modes_known(modes: Sequence[Mode], bits: int = 100) -> bool:
+    """Whether every pole is exact or known to ``bits`` bits, and every coefficient relative to the largest one."""
+    largest = arb(0)
+    for mode in modes:
+        for coefficient in mode.coefficients:
+            largest = largest.max(abs(coefficient).lower())
+    limit = largest * arb(2) ** -bits
+    return all(
+        (mode.pole.is_exact() or int(mode.pole.rel_accuracy_bits()) >= bits)
+        and all(bool(c.rad() <= limit) for c in mode.coefficients)
+        for mode in modes
+    )
 
 
 def _times_linear(series: list[acb], constant: acb) -> list[acb]:

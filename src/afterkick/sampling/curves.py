@@ -13,7 +13,7 @@ from flint import acb, arb, fmpq
 from numpy.typing import NDArray
 
 from afterkick.model.model import Model
-from afterkick.model.partial_fractions import Mode, evaluate
+from afterkick.model.partial_fractions import Mode, evaluate, modes_known
 from afterkick.numbers import certified, fraction, mid_float
 from afterkick.sampling.sampled import Sampled
 
@@ -64,7 +64,7 @@ def analytic_curve(model: Model, integrations: int, times: Sequence[fmpq], exact
 
 def analytic_floats(model: Model, integrations: int, times_s: Floats) -> Floats:
     """The same at float times."""
-    modes = certified(lambda: model.response_modes(integrations), _usable, "the partial fractions of the model")
+    modes = certified(lambda: model.response_modes(integrations), modes_known, "the partial fractions of the model")
     later = np.maximum(times_s, 0.0)
 
     def terms(mode: Mode) -> NDArray[np.complex128]:
@@ -87,7 +87,7 @@ def sampled_curve(sampled: Sampled, integrations: int, indices: Indices, exact: 
     if exact:
         values = _in_balls(lambda: _sampled_balls(sampled.pulse_modes(integrations), indices), "the sampled response")
     else:
-        modes = certified(lambda: sampled.pulse_modes(integrations), _usable, "the partial fractions in z")
+        modes = certified(lambda: sampled.pulse_modes(integrations), modes_known, "the partial fractions in z")
         values = _sampled_floats(modes, indices)
     return np.where(indices < early, start[np.minimum(indices, early - 1)], values)
 
@@ -123,12 +123,6 @@ def _summed(modes: Sequence[Mode], terms: Callable[[Mode], NDArray[np.complex128
 
 def _complex(value: acb) -> complex:
     return complex(mid_float(value.real), mid_float(value.imag))
-
-
-def _usable(modes: Sequence[Mode]) -> bool:
-    """Whether poles and coefficients are good to float64."""
-    values = [value for mode in modes for value in (mode.pole, *mode.coefficients)]
-    return all(int(value.rel_accuracy_bits()) >= 60 or value.is_exact() for value in values)
 
 
 def _known(values: Sequence[arb]) -> bool:

@@ -61,7 +61,7 @@ def invariant_transfer(
     :raises Refused: a rate at which all samples are zero.
     """
     pulse = pulse_response(model, method, period, fraction_s, first_sample)
-    poles = tuple(exponential(root, period) for root, times in model.poles.items() for _ in range(times))
+    poles = tuple(z for root, times in model.poles.items() for z in exponential(root, period) * times)
     leading, last = _extent(model, method, fraction_s != 0, first_sample)
     denominator = expanded(poles)
     samples = [pulse(n) for n in range(last + 1)]

@@ -17,8 +17,8 @@ from afterkick.sampling.pulse_transfer import PulseTransfer, ZRoot, exponential
 __all__ = ["backward_difference_transfer", "bilinear_constant", "bilinear_transfer", "matched_transfer"]
 
 
-Mapped = tuple[arb, ZRoot | None]
-"""(s - root), or the product over its conjugate pair, as scale * prod(1 - z_root/z); None: scale / z."""
+Mapped = tuple[arb, tuple[ZRoot, ...]]
+"""(s - root), or the product over its conjugate pair, as scale * prod(1 - z_root/z); without roots: scale / z."""
 
 
 def bilinear_constant(period: fmpq, match_hz: fmpq | None) -> arb:
@@ -36,10 +36,10 @@ def bilinear_transfer(model: Model, period: fmpq, match_hz: fmpq | None) -> Puls
     def mapped(root: Root) -> Mapped:
         value = root.evaluate()
         if root.real and vanishes(k - value):
-            return (-2 * k, None)
+            return (-2 * k, ())
         on_axis = is_exactly_zero(value.real)
         image = acb(1) if root.at_origin else (k + value) / (k - value)
-        return (_norm(k - value, root), ZRoot(image, root.real, on_axis, root.key))
+        return (_norm(k - value, root), (ZRoot(image, root.real, on_axis, root.key),))
 
     return _assembled(model, mapped, ZRoot(acb(-1), True, name=-1))
 
@@ -50,9 +50,9 @@ def backward_difference_transfer(model: Model, period: fmpq) -> PulseTransfer:
     def mapped(root: Root) -> Mapped:
         lead = 1 - root.evaluate() * period
         if root.real and vanishes(lead):
-            return (-1 / arb(period), None)
+            return (-1 / arb(period), ())
         # 1/lead is exact for a root at the origin
-        return (_norm(lead, root) / arb(period) ** root.degree, ZRoot(1 / lead, root.real, name=root.key))
+        return (_norm(lead, root) / arb(period) ** root.degree, (ZRoot(1 / lead, root.real, name=root.key),))
 
     transfer = _assembled(model, mapped, None)
     poles_at_zero = (ZRoot(acb(0), True, name=0),) * max(0, -model.relative_degree)
@@ -97,12 +97,11 @@ def _assembled(model: Model, mapped: Callable[[Root], Mapped], at_infinity: ZRoo
         nonlocal gain, late
         found: list[ZRoot] = []
         for root, times in roots.items():
-            scale, z_root = mapped(root)
+            scale, images = mapped(root)
             gain *= scale ** (power * times)
-            if z_root is None:
+            found += images * times
+            if not images:
                 late += power * times
-            else:
-                found += [z_root] * times
         return tuple(found)
 
     zeros = collect(model.zeros, 1)

@@ -9,7 +9,7 @@ from attrs import frozen
 from flint import acb, acb_poly, arb, ctx, fmpq
 
 from afterkick.model.roots import Root
-from afterkick.numbers import COINCIDENCE_BITS, is_exactly_zero
+from afterkick.numbers import COINCIDENCE_BITS, is_exactly_zero, vanishes
 
 __all__ = ["PulseTransfer", "ZRoot", "expanded", "exponential", "real_polynomial_roots"]
 
@@ -42,10 +42,18 @@ class ZRoot:
         return self.real and bool(self.value.is_exact()) and bool(self.value.real == 1)
 
 
-def exponential(root: Root, period: fmpq) -> ZRoot:
-    """e^(root * T): exactly 1 for a root at the origin, on the circle for one on the imaginary axis."""
+def exponential(root: Root, period: fmpq) -> tuple[ZRoot, ...]:
+    """e^(root * T): exactly 1 for a root at the origin, on the circle for one on the imaginary axis.
+
+    A pair at a multiple of half the rate becomes two equal real roots.
+    """
     value = root.evaluate()
-    return ZRoot((value * period).exp(), root.real, on_circle=is_exactly_zero(value.real), name=root.key)
+    image = (value * period).exp()
+    on_circle = is_exactly_zero(value.real)
+    if root.real or not vanishes(image.imag):
+        return (ZRoot(image, root.real, on_circle, root.key),)
+    place = acb(1 if image.real > 0 else -1) if on_circle else acb(image.real)
+    return (ZRoot(place, True, on_circle, root.key),) * 2
 
 
 @frozen

@@ -40,6 +40,8 @@ CONVENTION = "h_d[n]/T against h(nT), Dirac part apart, mean of both sides at a 
 
 _POINTS = 16384
 _EXACT_POINTS = 400
+_ALIGNING_POINTS = 2048
+_ALIGNING_EXACT_POINTS = 64
 _LONGEST_HORIZON = 1 << 24
 _FRACTIONS = 8
 """Instants looked at within each sampling interval."""
@@ -225,7 +227,7 @@ class _Comparison:
 
     def _aligned(self) -> tuple[float, Floats]:
         """The delay in samples that explains most, to 1e-4 by golden section, and what remains."""
-        count = min(len(self.points.indices), 2048)
+        count = min(len(self.points.indices), _ALIGNING_EXACT_POINTS if self.exact else _ALIGNING_POINTS)
         some = np.linspace(0, len(self.points.indices) - 1, count).astype(int)  # steps of at least 1: no repetition
 
         def remains(delay: float, chosen: Indices | slice) -> Floats:

@@ -1,8 +1,9 @@
 """The sampled filter: exact in z, evaluated to any accuracy that is asked for."""
 
 from collections import Counter
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from functools import cached_property, lru_cache
+from math import comb
 
 from attrs import field, frozen
 from flint import acb, arb, fmpq
@@ -124,6 +125,27 @@ class Sampled:
                 value -= denominator[j] * samples[n - j]
             samples.append(value)
         return samples
+
+    def pulse(self, indices: Sequence[int]) -> list[arb]:
+        """g[n] at rising indices n, without the whole-sample delay, at the working precision."""
+        early = 1 + sum(is_exactly_zero(pole.value) for pole in self.transfer().poles)
+        first = self.first_samples(early)
+        late = [n for n in indices if n >= early]
+        values = [first[n] for n in indices if n < early] + [arb(0)] * len(late)
+        for mode in self.pulse_modes():
+            weights = [c / mode.pole**j for j, c in enumerate(mode.coefficients)]
+            power, at = acb(1), 1
+            stride, advance = 0, acb(1)
+            for place, n in enumerate(late, len(values) - len(late)):
+                if n - at != stride:
+                    stride, advance = n - at, mode.pole ** (n - at)
+                power *= advance
+                at = n
+                value = weights[0]
+                for j, weight in enumerate(weights[1:], 1):
+                    value += weight * comb(n - 1, j)
+                values[place] += (value * power).real if mode.real else 2 * (value * power).real
+        return values
 
     def parallel(self, bits: int) -> tuple[arb, tuple[ParallelSection, ...]] | None:
         """The direct part and first-order-numerator terms of the sum form; None for repeated poles, which a pair at a

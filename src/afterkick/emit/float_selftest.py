@@ -1,0 +1,121 @@
+"""The self-test of a filter in single precision: stored stimuli and a longer run, compared value by value.
+
+Whether a compiler fuses or widens can't be asked of it portably, so the test measures it: equal, near, or wrong.
+"""
+
+import numpy as np
+from attrs import frozen
+
+from afterkick.emit.banner import selftest_banner
+from afterkick.emit.float_literals import single
+from afterkick.emit.selftest import BLOCK, INCREMENT, LONG_RUN, MULTIPLIER, PART, SEED, WORD
+from afterkick.emit.symbols import Symbols
+from afterkick.emit.text import harmless
+from afterkick.errors import Problem, Refused
+from afterkick.floating.program import FloatProgram
+from afterkick.floating.simulate import float_trace, simulate_float
+
+__all__ = ["FloatSelfTestView", "float_selftest_view"]
+
+NOISE_BITS = 16
+PER_LINE = 5
+ALLOWED = 8
+"""How much farther than the simulator's own roundings lead from exact arithmetic another rounding may lead."""
+
+
+@frozen
+class FloatSelfTestView:
+    """What the self-test's templates place."""
+
+    symbols: Symbols
+    header_banner: tuple[str, ...]
+    source_banner: tuple[str, ...]
+    part: int
+    samples: int
+    input_rows: tuple[str, ...]
+    expected_rows: tuple[str, ...]
+    long_run: int
+    long_blocks: int
+    long_rows: tuple[str, ...]
+    """The last sample of each block of the long run."""
+    block: int
+    last: int
+    """The index of a block's last sample."""
+    seed: str
+    multiplier: str
+    increment: str
+    noise_scale: str
+    tolerance: str
+    unit: str
+
+
+def float_selftest_view(program: FloatProgram, symbols: Symbols) -> FloatSelfTestView:
+    """Stimuli and what must come out.
+
+    :raises Refused: for a filter that overflows within the promised peak.
+    """
+    format_ = program.input_format
+    peak = np.float32(int(format_.peak.numerator) / int(format_.peak.denominator))
+    scale = peak / np.float32(1 << (NOISE_BITS - 1))
+    parts = _parts(peak, scale)
+    noise = _noise(LONG_RUN, scale)
+    expected = np.concatenate([simulate_float(program, part) for part in parts])
+    long_run = simulate_float(program, noise)
+    if not (np.isfinite(expected).all() and np.isfinite(long_run).all()):
+        found = f"outputs beyond the largest single within {LONG_RUN} samples of the promised peak"
+        remedy = "a stable filter, or other units for the input or output"
+        raise Refused(Problem("arithmetic.kind", found, "outputs below 2^128", remedy))
+    return FloatSelfTestView(
+        symbols=symbols,
+        header_banner=selftest_banner(program, ".h"),
+        source_banner=selftest_banner(program, ".c"),
+        part=PART,
+        samples=expected.size,
+        input_rows=_rows(np.concatenate(parts)),
+        expected_rows=_rows(expected),
+        long_run=LONG_RUN,
+        long_blocks=LONG_RUN // BLOCK,
+        long_rows=_rows(long_run[BLOCK - 1 :: BLOCK]),
+        block=BLOCK,
+        last=BLOCK - 1,
+        seed=f"UINT32_C({SEED})",
+        multiplier=f"UINT32_C({MULTIPLIER})",
+        increment=f"UINT32_C({INCREMENT})",
+        noise_scale=single(float(scale)),
+        tolerance=single(_tolerance(program, [*parts, noise])),
+        unit=harmless(program.output_format.unit),
+    )
+
+
+def _parts(peak: np.float32, scale: np.float32) -> list[np.ndarray]:
+    """Impulse, step, alternation at the peak in blocks that excite slow sections too, and noise of an eighth."""
+    n = np.arange(PART)
+    impulse = np.where(n == 0, peak, np.float32(0))
+    step = np.full(PART, -peak)
+    alternation = np.where((np.where(n < PART // 2, n & 1, n & 4)) == 0, peak, -peak)
+    return [impulse, step, alternation, _noise(PART, scale / np.float32(8))]
+
+
+def _noise(count: int, scale: np.float32) -> np.ndarray:
+    """Singles within the peak from the highest 16 bits of the generator, one rounding each."""
+    codes, seed = [], SEED
+    for _ in range(count):
+        seed = (seed * MULTIPLIER + INCREMENT) % WORD
+        codes.append((seed >> (32 - NOISE_BITS)) - (1 << (NOISE_BITS - 1)))
+    return np.array(codes, dtype=np.float32) * scale
+
+
+def _tolerance(program: FloatProgram, stimuli: list[np.ndarray]) -> float:
+    """A few times what the roundings do to these stimuli, and at least some last places of the largest output."""
+    difference = largest = 0.0
+    for stimulus in stimuli:
+        exact = float_trace(program, stimulus, precision=np.float64).outputs
+        difference = max(difference, float(np.max(np.abs(simulate_float(program, stimulus) - exact))))
+        largest = max(largest, float(np.max(np.abs(exact))))
+    return ALLOWED * max(difference, 2.0**-24 * largest)
+
+
+def _rows(values: np.ndarray) -> tuple[str, ...]:
+    """Initialisers, a few a line."""
+    texts = [single(float(value)) for value in values]
+    return tuple(", ".join(texts[i : i + PER_LINE]) + "," for i in range(0, len(texts), PER_LINE))

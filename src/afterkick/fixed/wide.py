@@ -1,0 +1,370 @@
+"""Sections that keep more than the data's bits: what the delta, coupled and parallel structures share.
+
+A section's output is fed back as wide as its states are, is handed on with a few bits more than the data have, and is
+rounded to the data word once, at the end of the whole filter.  The other roundings are chosen so fine that all of them
+together stay below a quarter of an output count.
+"""
+
+import math
+from collections.abc import Callable, Sequence
+from fractions import Fraction
+from typing import TYPE_CHECKING
+
+from attrs import evolve, field, frozen
+from flint import arb, fmpq
+
+from afterkick.errors import Problem, Refused
+from afterkick.fixed.cascade import SCALING_BITS, Builder, bits_of, delayed, float_section, moves, signal_words
+from afterkick.fixed.program import Coefficient, ProgramSection, Role, Rounding, Sum, Term, Word
+from afterkick.fixed.quantise import PROBE_BITS, ExactSection, Triple
+from afterkick.fixed.ranges import Interval, sum_range
+from afterkick.fixed.scaling import FloatSection, norm_exponents
+from afterkick.numbers import fraction, mid_float, round_to_integer, working_bits
+
+if TYPE_CHECKING:
+    from afterkick.design.schema import Arithmetic
+
+__all__ = [
+    "LEAST_COEFFICIENT_BITS",
+    "MOST_STATE_BITS",
+    "ONE",
+    "ZERO",
+    "Core",
+    "Frame",
+    "Scaled",
+    "Sheet",
+    "Weighed",
+    "ball_floats",
+    "endless_at",
+    "floor_log2",
+    "nearest",
+    "output_sum",
+    "over_power_of_two",
+    "rounded",
+    "wide_cascade",
+]
+
+MOST_STATE_BITS = 60
+PRODUCT_BITS = 62
+ENOUGH_COEFFICIENT_BITS = 24
+"""With 62 bits for a product, states give way to coefficients as long as these have fewer bits."""
+LEAST_COEFFICIENT_BITS = 6
+BITS_OF_INT = 32
+ENDLESS = 200
+"""A norm above 2^ENDLESS is no norm."""
+
+
+@frozen
+class Scaled:
+    """integer * 2^-fraction_bits."""
+
+    integer: int
+    fraction_bits: int
+
+    @property
+    def value(self) -> Fraction:
+        """The exact number."""
+        return self.integer * Fraction(2) ** -self.fraction_bits
+
+
+ZERO = Scaled(0, 0)
+ONE = Scaled(1, 0)
+
+
+def floor_log2(value: arb) -> int:
+    """Of the magnitude, to within one."""
+    return math.floor(mid_float(abs(value).log() / arb(2).log()))
+
+
+def rounded(compute: Callable[[], arb], bits: int, what: str, most: int | None = None) -> Scaled:
+    """The nearest integer, with the most fraction bits, ``most`` of them, with which it is at most 2^(bits-1)."""
+    with working_bits(PROBE_BITS):
+        fraction_bits = bits - floor_log2(compute())
+    if most is not None:
+        fraction_bits = min(fraction_bits, most)
+    while True:
+        integer = round_to_integer(lambda: compute() * fmpq(2) ** fraction_bits, what)  # noqa: B023 - called at once
+        if abs(integer) <= 1 << (bits - 1):
+            return Scaled(integer, fraction_bits)
+        fraction_bits -= 1
+
+
+def nearest(value: Fraction, bits: int) -> Scaled:
+    """As :func:`rounded`, of an exact number other than zero."""
+    size = value.numerator.bit_length() - value.denominator.bit_length()
+    fraction_bits = bits - size + 1
+    while abs(integer := round(value * Fraction(2) ** fraction_bits)) > 1 << (bits - 1):
+        fraction_bits -= 1
+    return Scaled(integer, fraction_bits)
+
+
+def over_power_of_two(first: Fraction, second: Fraction, third: Fraction) -> tuple[Triple, int]:
+    """As integers with their common fraction bits; every denominator is a power of two."""
+    bits = max(value.denominator.bit_length() - 1 for value in (first, second, third))
+    return (int(first * (1 << bits)), int(second * (1 << bits)), int(third * (1 << bits))), bits
+
+
+def endless_at(section: ExactSection) -> bool:
+    """Whether a response of the section does not decay."""
+    return section.marginal or section.unstable
+
+
+def ball_floats(b: Sequence[arb], a: Sequence[arb]) -> FloatSection:
+    """A section in doubles; the exponent takes up the size of its numerator."""
+    exponent = max((floor_log2(x) for x in b if not x.contains(0)), default=0)
+    b0, b1, b2 = (mid_float(x * fmpq(2) ** -exponent) for x in b)
+    return FloatSection((b0, b1, b2), (mid_float(a[1]), mid_float(a[2])), exponent)
+
+
+@frozen
+class Frame:
+    """Where a section stands: what it filters, at which binary points, and what limits its states."""
+
+    builder: Builder
+    state_bits: int | None
+    source: str
+    source_bits: int
+    source_fraction_bits: int
+    """Counted from the last place of the signal in the data word."""
+    place: int
+    """The fraction bits of the section's output, were it a data word."""
+    before: tuple[FloatSection, ...]
+    """The sections up to this one, driven with the promised peak."""
+    after: tuple[FloatSection, ...]
+    """Those behind it, up to the first without a norm."""
+    roundings: int
+    """An upper bound of how many states and wide outputs there are."""
+
+    def fraction_bits(self, errors: Sequence[FloatSection | int]) -> tuple[int, ...]:
+        """Of each state: with these all roundings together add less than a quarter of the output's last place.
+
+        ``errors`` are the responses of the wide output to a rounding of each state, or the logarithm of their norms.
+        """
+        spare = 1 + math.ceil(math.log2(self.roundings)) + (self.builder.rounding is Rounding.FLOOR)
+        found = []
+        for error in errors:
+            norm = error if isinstance(error, int) else norm_exponents([error, *self.after], "peak-gain")[-1]
+            found.append(max(0 if norm is None else min(norm, ENDLESS) + spare, 0))
+        return tuple(found)
+
+    def reaches(self, shapes: Sequence[FloatSection | int]) -> tuple[int, ...]:
+        """e of each state, from its response to the section's input: for every input it stays below 2^e full scales.
+
+        An estimate: what proves it comes later.
+        """
+        found = []
+        for shape in shapes:
+            norm = shape if isinstance(shape, int) else norm_exponents([*self.before, shape], "peak-gain")[-1]
+            found.append(1 if norm is None else norm)
+        return tuple(found)
+
+    def widths(self, fractions: Sequence[int], reaches: Sequence[int]) -> tuple[int, ...]:
+        """One bit more than the estimate needs, for what roundings add."""
+        return tuple(max(self.builder.data_bits + e + g + 1, 8) for e, g in zip(reaches, fractions, strict=True))
+
+    def within(
+        self, number: int, fractions: tuple[int, ...], reaches: tuple[int, ...], multiplied: Sequence[bool]
+    ) -> tuple[int, ...]:
+        """The fraction bits that state words of the given width leave, or the widest ones.
+
+        A state that is ``multiplied`` leaves room for the coefficient.
+
+        :raises Refused: where they can't hold the range.
+        """
+        needed = self.widths(fractions, reaches)
+        if self.state_bits is not None:
+            most = [min(self.state_bits, MOST_STATE_BITS)] * len(needed)
+            fractions = tuple(g + limit - bits for g, bits, limit in zip(fractions, needed, most, strict=True))
+        else:
+            beside = PRODUCT_BITS - min(self.builder.coefficient_bits, ENOUGH_COEFFICIENT_BITS)
+            most = [min(beside, MOST_STATE_BITS) if factor else MOST_STATE_BITS for factor in multiplied]
+            # the allowance for rounding has a bit to give where it makes a word of 32 bits
+            most = [BITS_OF_INT if bits == BITS_OF_INT + 1 else limit for bits, limit in zip(needed, most, strict=True)]
+            fractions = tuple(g - max(0, bits - limit) for g, bits, limit in zip(fractions, needed, most, strict=True))
+        if min(fractions) < 0:
+            raise Refused(
+                Problem(
+                    f"arithmetic.state_bits, section {number}",
+                    f"states of {most[0]} bits",
+                    f"at least {max(limit - g for limit, g in zip(most, fractions, strict=True) if g < 0)} bits",
+                    f"state_bits = {max(needed)}, or a larger output full scale",
+                )
+            )
+        return fractions
+
+    def too_narrow(self, number: int, widest: int) -> Refused:
+        """No coefficients of enough bits fit beside the states."""
+        return Refused(
+            Problem(
+                f"arithmetic, section {number}",
+                f"products with states of {widest} bits do not fit the accumulator",
+                f"sums of at most {self.builder.widest} bits",
+                "accumulator_bits = 64, narrower data or states, or a lower sampling rate",
+            )
+        )
+
+
+Weighed = tuple[Scaled, str, str]
+"""A factor, the word it multiplies, and a label."""
+
+
+class Sheet:
+    """Words and steps in the making, with the range of each word."""
+
+    def __init__(self, frame: Frame, states: Sequence[tuple[str, int, int]]) -> None:
+        self.frame = frame
+        self.words: list[Word] = []
+        self.sums: list[Sum] = []
+        self.ranges = {frame.source: Interval.of_word(frame.source_bits)}
+        self.fractions = {frame.source: frame.source_fraction_bits}
+        for name, bits, fraction_bits in states:
+            self.ranges[name], self.fractions[name] = Interval.of_word(bits), fraction_bits
+            self.words.append(Word(name, bits, frame.place + fraction_bits, Role.STATE))
+
+    def temporary(self, dest: str, weighed: Sequence[Weighed], fraction_bits: int) -> bool:
+        """A sum as wide as it gets, rounded to so many fraction bits; False where no accumulator holds it."""
+        listed = [term for term in weighed if term[0].integer]
+        points = [factor.fraction_bits + self.fractions[word] for factor, word, _ in listed]
+        scale = max([fraction_bits, *points])
+        terms = tuple(
+            Term(factor.integer, word, scale - point, label)
+            for (factor, word, label), point in zip(listed, points, strict=True)
+        )
+        places = scale - fraction_bits
+        width = self.frame.builder.width(terms, self.ranges, places)
+        if width is None or places > width - 2:
+            return False
+        builder = self.frame.builder
+        step = Sum(dest, terms, width, places, builder.rounding, builder.overflow)
+        self.ranges[dest], self.fractions[dest] = sum_range(step, self.ranges).result, fraction_bits
+        self.words.append(Word(dest, bits_of(self.ranges[dest]), self.frame.place + fraction_bits, Role.TEMPORARY))
+        self.sums.append(step)
+        return True
+
+    def state(self, dest: str, terms: tuple[str, ...]) -> bool:
+        """The plain sum of words of the state's own binary point; False where no accumulator holds it."""
+        builder = self.frame.builder
+        listed = tuple(Term(1, name) for name in terms)
+        width = builder.width(listed, self.ranges, 0)
+        if width is None:
+            return False
+        self.sums.append(Sum(dest, listed, width, 0, builder.rounding, builder.overflow))
+        return True
+
+
+@frozen
+class Core:
+    """One section without the rounding of its output."""
+
+    words: tuple[Word, ...]
+    steps: tuple[Sum, ...]
+    first: int
+    """How many of the steps lead to the wide output; the others bring the states on."""
+    wide: str
+    """The word that holds the output before it is rounded."""
+    bits: int
+    fraction_bits: int
+    """Of the wide output, counted from the last place of the data word."""
+    b: Triple
+    b_bits: int
+    a: Triple
+    a_bits: int
+    coefficients: tuple[Coefficient, ...] = field(repr=False)
+
+
+def wide_cascade(
+    make: Callable[[ExactSection, Frame], Core],
+    sections: Sequence[ExactSection],
+    exponents: Sequence[int],
+    arithmetic: "Arithmetic",
+    peak: fmpq,
+    delay_samples: int,
+) -> tuple[ProgramSection, ...]:
+    """The sections one behind the other, and the rounding to the data word at the end.
+
+    :raises Refused: with the problems of all sections.
+    """
+    builder = Builder.of(arithmetic)
+    with working_bits(SCALING_BITS):
+        floats = [float_section(section) for section in sections]
+    driven = FloatSection((float(fraction(peak)), 0.0, 0.0), (0.0, 0.0), 0)
+    source, source_bits, source_fraction_bits = delayed("x", delay_samples), builder.data_bits, 0
+    words = signal_words("x", Role.INPUT, builder.data_bits - 1, delay_samples, builder.data_bits)
+    shift = moves("x", delay_samples)
+    before: tuple[FloatSection, ...] = (driven,)
+    problems: list[Problem] = []
+    wired = []
+    for k, section in enumerate(sections):
+        last = k == len(sections) - 1
+        endless = next((j for j in range(k + 1, len(sections)) if endless_at(sections[j])), len(sections))
+        frame = Frame(
+            builder,
+            arithmetic.state_bits,
+            source,
+            source_bits,
+            source_fraction_bits,
+            builder.data_bits - 1 - exponents[k],
+            before,
+            tuple(floats[k + 1 : endless]),
+            4 * len(sections),
+        )
+        handed_on = frame.fraction_bits([FloatSection((1.0, 0.0, 0.0), (0.0, 0.0), 0)])[0]
+        # an output without a norm is limited by its state, to twice the full scale
+        before = (evolve(driven, b=(2.0, 0.0, 0.0)),) if endless_at(section) else (*before, floats[k])
+        try:
+            core = make(section, frame)
+        except Refused as refusal:
+            problems += refusal.problems
+            continue
+        if last:
+            output = output_sum(builder, (core,), None)
+            word = Word("y", builder.data_bits, frame.place, Role.OUTPUT)
+        else:
+            sheet = Sheet(
+                evolve(frame, source=core.wide, source_bits=core.bits, source_fraction_bits=core.fraction_bits), ()
+            )
+            sheet.temporary(f"v{k + 1}", [(ONE, core.wide, "")], min(handed_on, core.fraction_bits))
+            (output,), (word,) = sheet.sums, sheet.words
+        wired.append(
+            ProgramSection(
+                words=(*(words if k == 0 else ()), word, *core.words),
+                steps=(*core.steps[: core.first], output, *core.steps[core.first :], *(shift if k == 0 else ())),
+                source=source,
+                dest=word.name,
+                b=core.b,
+                b_fraction_bits=core.b_bits,
+                a=core.a,
+                a_fraction_bits=core.a_bits,
+                coefficients=core.coefficients,
+                gain_log2=(exponents[k - 1] if k else 0) - exponents[k],
+                marginal=section.marginal,
+            )
+        )
+        source, source_bits, source_fraction_bits = word.name, word.bits, word.fraction_bits - frame.place
+    if problems:
+        raise Refused(problems)
+    return tuple(wired)
+
+
+def output_sum(builder: Builder, cores: Sequence[Core], direct: tuple[Scaled, str] | None) -> Sum:
+    """The output word: wide outputs and the direct part added up and rounded."""
+    ranges = {core.wide: Interval.of_word(core.bits) for core in cores}
+    points = [core.fraction_bits for core in cores]
+    if direct is not None:
+        ranges[direct[1]] = Interval.of_word(builder.data_bits)
+        points.append(direct[0].fraction_bits)
+    scale = max([0, *points])
+    terms = [Term(1, core.wide, scale - core.fraction_bits) for core in cores]
+    if direct is not None and direct[0].integer:
+        terms.append(Term(direct[0].integer, direct[1], scale - direct[0].fraction_bits, "direct"))
+    width = builder.width(tuple(terms), ranges, scale)
+    if width is None or scale > width - 2:
+        raise Refused(
+            Problem(
+                "arithmetic",
+                "the sum of the sections does not fit the accumulator",
+                f"a sum of at most {builder.widest} bits",
+                "accumulator_bits = 64, narrower states, or a larger output full scale",
+            )
+        )
+    return Sum("y", tuple(terms), width, scale, builder.rounding, builder.overflow)
