@@ -9,6 +9,7 @@ from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from decimal import Decimal
 from fractions import Fraction
+from math import inf
 from typing import TypeVar
 
 from flint import acb, arb, ctx, fmpq
@@ -27,6 +28,7 @@ __all__ = [
     "imaginary_part",
     "is_exactly_zero",
     "mid_float",
+    "nearest_float",
     "rational",
     "real_part",
     "round_to_integer",
@@ -51,6 +53,14 @@ def rational(value: Decimal | Fraction | int | str) -> fmpq:
 def fraction(value: fmpq) -> Fraction:
     """The same rational as a standard-library fraction."""
     return Fraction(int(value.numerator), int(value.denominator))
+
+
+def nearest_float(value: fmpq) -> float:
+    """The nearest double; an infinity beyond the range of doubles."""
+    try:
+        return float(fraction(value))
+    except OverflowError:
+        return inf if value > 0 else -inf
 
 
 @contextmanager

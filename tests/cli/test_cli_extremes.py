@@ -92,6 +92,20 @@ def test_extreme_full_scales(input_scale, output_scale, scaling, tmp_path):
     assert "full scale" in shown
 
 
+@pytest.mark.parametrize(("top", "bottom"), [("1e-300", "1e300"), ("1e300", "1e-300")])
+def test_full_scales_beyond_the_range_of_doubles(top, bottom, tmp_path):
+    """A gain of 1e600 or 1e-600 between signals that fit it: figures in counts have no float, and say so."""
+    signals = f"[signals]\ninput = {{ full_scale = {bottom} }}\noutput = {{ full_scale = {top} }}"
+    text = design_text(ratio([top], [bottom, bottom]), more=f"{signals}\n[arithmetic]\ncoefficient_bits = 32")
+    shown = shown_or_refused(text, tmp_path)
+    assert shown.startswith("probe: holds")
+    kicked = run("kick", write(tmp_path, text))
+    assert kicked.exit_code == 0
+    assert kicked.stderr == ""
+    json_of(run("kick", "--json", write(tmp_path, text)))
+    assert run("emit", write(tmp_path, text), "-o", str(tmp_path / "out")).exit_code == 0
+
+
 @pytest.mark.parametrize("method", ["bilinear", "backward-difference"])
 @pytest.mark.parametrize("name", ["improper", "ideal pid"])
 def test_an_improper_model_has_no_impulse_figures(name, method, tmp_path):

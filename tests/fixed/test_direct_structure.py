@@ -1,7 +1,7 @@
 """The direct structure: what is kept exactly, what is refused, how the gain is split."""
 
 import math
-from time import perf_counter
+from time import process_time
 
 import pytest
 from attrs import evolve
@@ -273,11 +273,11 @@ def test_norm_estimates_of_slow_poles(slack):
 
 
 def test_program_is_fast_at_high_oversampling():
-    """Four sections at 10,000 samples per corner period, the exact filter at hand: well under a tenth of a second."""
+    """Four sections at 10,000 samples per corner period, the exact filter at hand, the search included."""
     filtered = sampled(blocks(Lowpass("butterworth", 8, fmpq(1))), 10_000, "zero-order-hold")
     exact_sections(filtered)
     arithmetic = Arithmetic(data_bits=32, coefficient_bits=32)
     filtered.sections(128)
-    start = perf_counter()
+    start = process_time()
     direct_program(filtered, arithmetic, Signals(), "probe")
-    assert perf_counter() - start < 0.5
+    assert process_time() - start < 0.5

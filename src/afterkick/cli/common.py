@@ -35,7 +35,6 @@ LARGEST_FILE = 1 << 20
 
 json_option = click.option("--json", "as_json", is_flag=True, help="Print one JSON object and nothing else.")
 
-
 targets_option = click.option(
     "--targets", type=click.Path(path_type=Path), help="A folder of your own target profiles as well."
 )
@@ -109,12 +108,14 @@ def write_all(folder: Path, files: Mapping[str, str]) -> None:
         for temporary, path in staged:
             os.chmod(temporary, 0o666 & ~_umask())
             os.replace(temporary, path)
-    except OSError as error:
+    except BaseException as error:  # also where the user stops it
         for temporary, _ in staged:
             Path(temporary).unlink(missing_ok=True)
         for path in created:
             with suppress(OSError):
                 path.rmdir()
+        if not isinstance(error, OSError):
+            raise
         found = error.strerror or str(error)
         raise Refused(Problem(str(folder), found, "a folder that can be written", "choose another -o")) from None
 

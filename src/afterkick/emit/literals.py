@@ -1,11 +1,15 @@
 """The one owner of numbers as text: C literals, and the decimals of comments."""
 
+from decimal import Decimal
+
 from flint import fmpq
 
 __all__ = ["container_bits", "decimal", "integer", "signed"]
 
 CONTAINERS = (8, 16, 32, 64)
 LONGEST_DECIMAL = 18
+DOUBLE_RANGE_BITS = 1020
+"""A quotient of integers whose lengths differ by less is a normal double."""
 
 
 def container_bits(bits: int) -> int:
@@ -40,7 +44,9 @@ def decimal(value: fmpq) -> str:
         if len(digits) <= LONGEST_DECIMAL:
             whole, part = digits[: len(digits) - places], digits[len(digits) - places :].rstrip("0")
             return ("-" if numerator < 0 else "") + whole + (f".{part}" if part else "")
-    return f"about {numerator / denominator:.9g}"
+    if abs(numerator.bit_length() - denominator.bit_length()) < DOUBLE_RANGE_BITS:
+        return f"about {numerator / denominator:.9g}"
+    return f"about {Decimal(numerator) / Decimal(denominator):.9g}"
 
 
 def _places(denominator: int) -> int | None:

@@ -10,15 +10,14 @@ from math import ceil, floor, inf, sqrt
 
 import numpy as np
 from attrs import frozen
-from flint import arb, fmpq
 from numpy.typing import NDArray
 
+from afterkick.fixed.exact_response import exact_response
 from afterkick.fixed.linear import LinearSystem, RationalResponse, RoundingSource
-from afterkick.fixed.modal_sums import AbsoluteSum, ModalResponse, absolute_sum, difference, modal_response, values
+from afterkick.fixed.modal_sums import AbsoluteSum, absolute_sum, difference, modal_response, values
 from afterkick.fixed.program import Program
 from afterkick.fixed.simulate import simulate
-from afterkick.model.partial_fractions import Mode, modes_known
-from afterkick.numbers import certified, fraction, is_exactly_zero
+from afterkick.numbers import fraction
 from afterkick.sampling.sampled import Sampled
 
 __all__ = ["Attained", "Bounds", "OutputError", "WordRange", "WorstCase", "bounds", "worst_input"]
@@ -39,6 +38,11 @@ class WordRange:
     from_rounding: float
     capacity_low: int
     capacity_high: int
+
+    @property
+    def filling(self) -> float:
+        """The part of the word that the range takes, at most 1 where it fits."""
+        return max(self.highest / self.capacity_high, self.lowest / self.capacity_low)
 
     @property
     def fits(self) -> bool:
@@ -104,7 +108,8 @@ class Bounds:
         """Why nothing is proved; empty where it is."""
         if self.unbounded:
             return self.unbounded
-        return ", ".join(f"{word.word} may overflow" for word in self.overflowing)
+        listed = ", ".join(f"{word.word} (up to {100 * word.filling:.4g} % of it)" for word in self.overflowing)
+        return f"words that may overflow: {listed}" if listed else ""
 
     @cached_property
     def proved(self) -> bool:
@@ -213,21 +218,6 @@ def _unbounded(words: tuple[WordRange, ...]) -> str:
     return f"the response of {', '.join(names)} does not decay, so only saturation limits it"
 
 
-def _exact_response(sampled: Sampled, scale: fmpq) -> ModalResponse:
-    """The exact sampled filter without its whole-sample delay, in output counts per input count."""
-    early = 1 + sum(is_exactly_zero(pole.value) for pole in sampled.transfer().poles)
-
-    def compute() -> tuple[tuple[arb, ...], tuple[Mode, ...]]:
-        first = tuple(value * scale for value in sampled.first_samples(early))
-        modes = sampled.pulse_modes()
-        return first, tuple(Mode(m.pole, m.real, tuple(c * scale for c in m.coefficients)) for m in modes)
-
-    def precise(found: tuple[tuple[arb, ...], tuple[Mode, ...]]) -> bool:
-        return modes_known(found[1])
-
-    return ModalResponse(*certified(compute, precise, "the exact pulse response"))
-
-
 def _output_error(
     program: Program,
     sampled: Sampled,
@@ -238,11 +228,11 @@ def _output_error(
 ) -> OutputError:
     scale = program.input_format.full_scale / program.output_format.full_scale
     late = RationalResponse(response.numerator.right_shift(program.delay_samples), response.denominator)
-    exact = _exact_response(sampled, scale)
+    exact = exact_response(sampled, scale)
     coefficients = peak * absolute_sum(difference(modal_response(late), exact)).upper
     sampling = 0.0
     if held is not None:
-        sampling = _up(peak * absolute_sum(difference(exact, _exact_response(held, scale))).upper)
+        sampling = _up(peak * absolute_sum(difference(exact, exact_response(held, scale))).upper)
     return OutputError(_up(coefficients), output.from_rounding, sampling)
 
 

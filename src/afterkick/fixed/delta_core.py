@@ -8,6 +8,7 @@ s2.  Each number has a binary point of its own, and so has each state.
 
 import math
 from fractions import Fraction
+from itertools import product
 from typing import TYPE_CHECKING
 
 from attrs import frozen
@@ -34,6 +35,7 @@ from afterkick.fixed.wide import (
     nearest,
     over_power_of_two,
     rounded,
+    simplest,
 )
 from afterkick.numbers import is_exactly_zero, mid_float, to_text, working_bits
 
@@ -44,8 +46,6 @@ __all__ = ["delta_core"]
 
 WITHOUT_NORM = 4
 """Fraction bits beyond log2 of a time constant where a rounding error never decays."""
-SIMPLEST = 1 << 16
-"""A gain at z = 1 whose odd part has numerator and denominator below this is taken as the rational it is."""
 SEARCHED = 16
 """Last places of c that are searched for the best ratio n : c, as far as this is 2^-10 of c at most."""
 
@@ -80,6 +80,8 @@ class Integers:
     c: tuple[Scaled, ...]
     sum_of_others: bool
     """Whether n1 is not an integer of its own but 2 b0 + n2/2: a zero at z = -1."""
+    gain: Scaled | None = None
+    """Of the last c and n, where n is not an integer of its own but gain * c."""
 
     @property
     def transfer(self) -> tuple[Triple, int, Triple, int]:
@@ -91,15 +93,18 @@ class Integers:
         return (*over_power_of_two(*b), *over_power_of_two(*a))
 
 
-def delta_core(section: ExactSection, frame: Frame) -> Core:
+def delta_core(section: ExactSection, frame: Frame, gain: Scaled | None = None) -> Core:
     """The section with the longest coefficients whose sums fit the accumulator.
+
+    With ``gain``, the gain at z = 1 of a section with b0 = 0, the last state takes c (gain x - w) instead of n x - c w.
 
     :raises Refused: where a coefficient loses its meaning, or words or sums are too narrow.
     """
     fractions, reaches = frame.fraction_bits(_errors(section)), frame.reaches(_shapes(section))
     fractions = frame.within(section.number, fractions, reaches, [i == 0 for i in range(len(fractions))])
-    for bits in range(frame.builder.coefficient_bits, LEAST_COEFFICIENT_BITS - 1, -1):
-        integers = _integers(section, bits)
+    lengths = range(frame.builder.coefficient_bits, LEAST_COEFFICIENT_BITS - 1, -1)
+    for bits, faint in product(lengths, range(1 if gain else 3)):
+        integers = _integers(section, bits, faint, gain)
         exact = _exact_integrator(frame, integers, fractions, reaches)
         core = _core(section, frame, integers, exact, reaches)
         if core is not None:
@@ -158,8 +163,12 @@ def _exact_integrator(
     return (*fractions[:-1], max(fractions[-1], min(finest, room)))
 
 
-def _integers(section: ExactSection, bits: int) -> Integers:
-    """The coefficients in words of ``bits`` bits, with what the exact section has of exact relations between them."""
+def _integers(section: ExactSection, bits: int, faint: int, gain: Scaled | None) -> Integers:
+    """The coefficients in words of ``bits`` bits, with what the exact section has of exact relations between them.
+
+    ``faint`` gives up last places that the impulse response does not see: 1 those of n1, 2 those of n2 too, and with
+    them the exact gain at z = 1.
+    """
     with working_bits(PROBE_BITS):
         exact = Numbers.of(section)
         b0, _, b2 = exact.b
@@ -173,8 +182,14 @@ def _integers(section: ExactSection, bits: int) -> Integers:
             return ZERO
         return rounded(lambda: getattr(Numbers.of(section), group)[index], bits, f"section {section.number}", most)
 
-    last_n, last_c = stored("n", order), stored("c", order - 1)
-    if last_n.integer and last_c.integer:
+    finest = _finest(exact, bits)
+    last_n, last_c = stored("n", order, finest[order] if faint == 2 else None), stored("c", order - 1)
+    if gain is not None:
+        # one of a sum: its zeros are nobody's zeros
+        last_n = Scaled(gain.integer * last_c.integer, gain.fraction_bits + last_c.fraction_bits)
+        others = [] if order == 1 else [stored("n", 1)]
+        return Integers((ZERO, *others, last_n), tuple([stored("c", 0), last_c][-order:]), False, gain)
+    if last_n.integer and last_c.integer and faint < 2:
         last_n, last_c = _best_ratio(section, last_c, bits)
     first_n = stored("n", 0)
     if order == 1:
@@ -193,14 +208,15 @@ def _integers(section: ExactSection, bits: int) -> Integers:
         return Integers((first_n, whole, last_n), c, bool(first_n.integer and last_n.integer))
     if pair_of_zeros:
         return Integers((first_n, last_n, last_n), c, False)
-    return Integers((first_n, stored("n", 1, _finest_middle(exact, bits)), last_n), c, False)
+    return Integers((first_n, stored("n", 1, finest[1] if faint else None), last_n), c, False)
 
 
-def _finest_middle(exact: Numbers, bits: int) -> int:
-    """Fraction bits of n1 beyond which its last place is lost beside what b0 and n2 do to the impulse response."""
+def _finest(exact: Numbers, bits: int) -> list[int]:
+    """Fraction bits of each n beyond which last places are lost beside the largest one's part of the impulse response."""
     slope = _slope(exact)
-    sizes = [exact.n[0] * slope, exact.n[1], exact.n[2] / slope]
-    return bits + 1 - max(floor_log2(size) for size in sizes if not size.contains(0))
+    sizes = [number / slope**i for i, number in enumerate(exact.n)]
+    largest = max(floor_log2(size) for size in sizes if not size.contains(0))
+    return [bits + 1 - largest - math.floor(i * math.log2(slope)) for i in range(len(sizes))]
 
 
 def _best_ratio(section: ExactSection, start: Scaled, bits: int) -> tuple[Scaled, Scaled]:
@@ -225,12 +241,7 @@ def _gain_at_one(section: ExactSection) -> Fraction:
     """n : c of the exact section: the simplest rational that its ball holds, else the ball's middle."""
     with working_bits(PROBE_BITS):
         exact = Numbers.of(section)
-        ball = exact.n[-1] / exact.c[-1]
-        power = Fraction(2) ** -floor_log2(ball)
-        mantissa, exponent = ball.mid().man_exp()
-        middle = int(mantissa) * Fraction(2) ** int(exponent)
-        simple = (middle * power).limit_denominator(SIMPLEST) / power
-        return simple if ball.overlaps(arb(fmpq(simple.numerator, simple.denominator))) else middle
+        return simplest(exact.n[-1] / exact.c[-1])
 
 
 def _core(
@@ -248,6 +259,11 @@ def _core(
     else:
         wide = states[0]
     first = len(sheet.sums)
+    if integers.gain is not None:
+        gap = max(integers.gain.fraction_bits + frame.source_fraction_bits, fractions[0])
+        weighed = [(integers.gain, frame.source, "gain"), (Scaled(-1, 0), wide, "")]
+        if not sheet.temporary(f"e{number}", weighed, gap):
+            return None
     for i in range(order):
         driving: list[Weighed] = [(integers.n[i + 1], frame.source, f"beta{i + 1}")]
         if i == 0 and integers.sum_of_others:
@@ -260,6 +276,8 @@ def _core(
         driving.append((Scaled(-c.integer, c.fraction_bits), wide, f"alpha{i + 1}"))
         if i + 1 < order:
             driving.append((ONE, states[i + 1], ""))
+        elif integers.gain is not None:
+            driving = [(c, f"e{number}", f"alpha{i + 1}")]
         if not sheet.temporary(differences[i], driving, fractions[i]):
             return None
     for state, difference in zip(states, differences, strict=True):
@@ -288,6 +306,10 @@ def _coefficients(section: ExactSection, integers: Integers, fractions: tuple[in
         rows = [("b0", exact.n[0], integers.n[0], 0)]
         rows += [(f"beta{i}", exact.n[i], integers.n[i], i * k) for i in range(1, len(exact.n))]
         rows += [(f"alpha{i}", exact.c[i - 1], integers.c[i - 1], i * k) for i in range(1, len(exact.c) + 1)]
+        if integers.gain is not None:
+            last = len(exact.n) - 1
+            at_one = exact.n[-1] / exact.c[-1]
+            rows = [row for row in rows if row[0] != f"beta{last}"] + [("gain", at_one, integers.gain, 0)]
         if integers.sum_of_others:
             rows = [row for row in rows if row[0] != "beta1"]
         return tuple(

@@ -3,7 +3,7 @@
 from flint import arb, fmpq
 
 from afterkick.fixed.modal_sums import ModalResponse
-from afterkick.model.partial_fractions import Mode
+from afterkick.model.partial_fractions import Mode, modes_known
 from afterkick.numbers import certified, is_exactly_zero
 from afterkick.sampling.sampled import Sampled
 
@@ -19,11 +19,4 @@ def exact_response(sampled: Sampled, scale: fmpq) -> ModalResponse:
         modes = sampled.pulse_modes()
         return first, tuple(Mode(m.pole, m.real, tuple(c * scale for c in m.coefficients)) for m in modes)
 
-    def precise(found: tuple[tuple[arb, ...], tuple[Mode, ...]]) -> bool:
-        return all(
-            (m.pole.is_exact() or int(m.pole.rel_accuracy_bits()) >= 100)
-            and all(int(c.rel_accuracy_bits()) >= 100 for c in m.coefficients)
-            for m in found[1]
-        )
-
-    return ModalResponse(*certified(compute, precise, "the exact pulse response"))
+    return ModalResponse(*certified(compute, lambda found: modes_known(found[1]), "the exact pulse response"))

@@ -89,6 +89,8 @@ def absolute_sum(response: ModalResponse) -> AbsoluteSum:
     if not response.bounded:
         return AbsoluteSum(lower, inf, inf)
     squares = sum(float(value.mid()) ** 2 for value in response.first)
+    if not response.modes:
+        return AbsoluteSum(lower, upper, squares)
     start = len(response.first)
     while True:
         tail = _tail(response.modes, start)
@@ -107,10 +109,12 @@ def values(response: ModalResponse, number: int) -> Floats:
     """h[0] .. h[number-1] in float64, an estimate good to the slack of the blocks."""
     parts = [np.array([float(value.mid()) for value in response.first])]
     start = len(response.first)
-    while start < number:
+    while start < number and response.modes:
         parts.append(_block(response.modes, start)[0])
         start += BLOCK
-    found: Floats = np.concatenate(parts)[:number]
+    found = np.zeros(number)
+    known = np.concatenate(parts)[:number]
+    found[: len(known)] = known
     return found
 
 

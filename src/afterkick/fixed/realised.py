@@ -20,26 +20,41 @@ __all__ = ["realised"]
 def realised(program: Program, sampled: Sampled) -> Sampled:
     """``sampled`` with the transfer function of the program's integers, in output units per input unit."""
     gain = program.output_format.full_scale / program.input_format.full_scale
-    numerators, denominators = [], []
-    for section in program.sections:
-        gain *= fmpq(2) ** (section.a_fraction_bits - section.b_fraction_bits)
-        numerators.append(_trimmed(section.b))
-        denominators.append(_trimmed(section.a))
+    numerators = [_trimmed(numerator) for numerator in _numerators(program)]
+    denominators = [_trimmed(section.a)[1] for section in program.sections]
     leading = sum(late for late, _ in numerators)
     for _, b in numerators:
         gain *= b[0]
-    for _, a in denominators:
+    for a in denominators:
         gain /= a[0]
-    surplus = leading + sum(len(b) - 1 for _, b in numerators) - sum(len(a) - 1 for _, a in denominators)
+    surplus = leading + sum(len(b) - 1 for _, b in numerators) - sum(len(a) - 1 for a in denominators)
 
     def transfer() -> PulseTransfer:
-        poles = [root for _, a in denominators for root in _roots(a)]
+        poles = [root for a in denominators for root in _roots(a)]
         poles += [ZRoot(acb(0), True, name=0)] * max(0, surplus)
         zeros = [root for _, b in numerators for root in _roots(b)]
         shared = Counter(pole.name for pole in poles) & Counter(zero.name for zero in zeros)
         return PulseTransfer(arb(gain), leading, _without(zeros, shared), _without(poles, shared))
 
     return evolve(sampled, attempt=transfer, warnings=())
+
+
+def _numerators(program: Program) -> list[Sequence[fmpq]]:
+    """Factors of the numerator over the product of all sections' a, in powers of 1/z."""
+    weighed = [
+        [b * fmpq(2) ** (section.a_fraction_bits - section.b_fraction_bits) for b in section.b]
+        for section in program.sections
+    ]
+    if program.structure != "parallel":
+        return [*weighed]
+    total = fmpq_poly([0])
+    for section, b in zip(program.sections, weighed, strict=True):
+        part = fmpq_poly(b)
+        for other in program.sections:
+            if other is not section:
+                part *= fmpq_poly(list(other.a))
+        total += part
+    return [total.coeffs()]
 
 
 def _without(roots: Sequence[ZRoot], shared: Counter[Hashable]) -> tuple[ZRoot, ...]:
@@ -54,13 +69,13 @@ def _without(roots: Sequence[ZRoot], shared: Counter[Hashable]) -> tuple[ZRoot, 
     return tuple(kept)
 
 
-def _trimmed(coefficients: Sequence[int]) -> tuple[int, list[int]]:
+def _trimmed(coefficients: Sequence[fmpq | int]) -> tuple[int, list[fmpq | int]]:
     """How many leading coefficients are zero, and the rest without trailing zeros."""
     present = [index for index, value in enumerate(coefficients) if value]
     return present[0], list(coefficients[present[0] : present[-1] + 1])
 
 
-def _roots(coefficients: Sequence[int]) -> list[ZRoot]:
+def _roots(coefficients: Sequence[fmpq | int]) -> list[ZRoot]:
     """The roots in z of a polynomial in 1/z, as often as they occur."""
     polynomial = fmpq_poly(list(reversed(coefficients)))
     on_circle = len(coefficients) == 3 and coefficients[0] == coefficients[2]

@@ -15,7 +15,7 @@ from flint import arb, fmpq
 
 from afterkick.errors import Problem, Refused
 from afterkick.fixed.cascade import SCALING_BITS, Builder, bits_of, delayed, float_section, moves, signal_words
-from afterkick.fixed.program import Coefficient, ProgramSection, Role, Rounding, Sum, Term, Word
+from afterkick.fixed.program import Coefficient, ProgramSection, Role, Rounding, Step, Sum, Term, Word
 from afterkick.fixed.quantise import PROBE_BITS, ExactSection, Triple
 from afterkick.fixed.ranges import Interval, sum_range
 from afterkick.fixed.scaling import FloatSection, norm_exponents
@@ -41,6 +41,7 @@ __all__ = [
     "output_sum",
     "over_power_of_two",
     "rounded",
+    "simplest",
     "wide_cascade",
 ]
 
@@ -50,6 +51,8 @@ ENOUGH_COEFFICIENT_BITS = 24
 """With 62 bits for a product, states give way to coefficients as long as these have fewer bits."""
 LEAST_COEFFICIENT_BITS = 6
 BITS_OF_INT = 32
+SIMPLEST = 1 << 16
+"""A gain between 1/2 and 4 with a denominator up to this is taken as the rational it is."""
 ENDLESS = 200
 """A norm above 2^ENDLESS is no norm."""
 
@@ -98,6 +101,15 @@ def nearest(value: Fraction, bits: int) -> Scaled:
     return Scaled(integer, fraction_bits)
 
 
+def simplest(ball: arb) -> Fraction:
+    """The simplest rational that a ball at PROBE_BITS holds, times a power of two; else the middle of the ball."""
+    power = Fraction(2) ** -floor_log2(ball)
+    mantissa, exponent = ball.mid().man_exp()
+    middle = int(mantissa) * Fraction(2) ** int(exponent)
+    simple = (middle * power).limit_denominator(SIMPLEST) / power
+    return simple if ball.overlaps(arb(fmpq(simple.numerator, simple.denominator))) else middle
+
+
 def over_power_of_two(first: Fraction, second: Fraction, third: Fraction) -> tuple[Triple, int]:
     """As integers with their common fraction bits; every denominator is a power of two."""
     bits = max(value.denominator.bit_length() - 1 for value in (first, second, third))
@@ -126,8 +138,10 @@ class Frame:
     source_bits: int
     source_fraction_bits: int
     """Counted from the last place of the signal in the data word."""
+    source_place: int
+    """The fraction bits of that signal, were it a data word."""
     place: int
-    """The fraction bits of the section's output, were it a data word."""
+    """Those of the section's output, were it a data word."""
     before: tuple[FloatSection, ...]
     """The sections up to this one, driven with the promised peak."""
     after: tuple[FloatSection, ...]
@@ -257,7 +271,7 @@ class Core:
     """One section without the rounding of its output."""
 
     words: tuple[Word, ...]
-    steps: tuple[Sum, ...]
+    steps: tuple[Step, ...]
     first: int
     """How many of the steps lead to the wide output; the others bring the states on."""
     wide: str
@@ -303,6 +317,7 @@ def wide_cascade(
             source,
             source_bits,
             source_fraction_bits,
+            builder.data_bits - 1 - (exponents[k - 1] if k else 0),
             builder.data_bits - 1 - exponents[k],
             before,
             tuple(floats[k + 1 : endless]),
@@ -316,19 +331,21 @@ def wide_cascade(
         except Refused as refusal:
             problems += refusal.problems
             continue
+        wide = next(word for word in core.words if word.name == core.wide)
         if last:
-            output = output_sum(builder, (core,), None)
-            word = Word("y", builder.data_bits, frame.place, Role.OUTPUT)
+            word, after = Word("y", builder.data_bits, frame.place, Role.OUTPUT), [output_sum(builder, (core,), None)]
+        elif wide.role is Role.TEMPORARY and core.fraction_bits <= handed_on:
+            word, after = wide, []
         else:
-            sheet = Sheet(
-                evolve(frame, source=core.wide, source_bits=core.bits, source_fraction_bits=core.fraction_bits), ()
-            )
+            read = evolve(frame, source=core.wide, source_bits=wide.bits, source_fraction_bits=core.fraction_bits)
+            sheet = Sheet(read, ())
             sheet.temporary(f"v{k + 1}", [(ONE, core.wide, "")], min(handed_on, core.fraction_bits))
-            (output,), (word,) = sheet.sums, sheet.words
+            (word,), after = sheet.words, sheet.sums
+        own = core.words if word is wide else (word, *core.words)
         wired.append(
             ProgramSection(
-                words=(*(words if k == 0 else ()), word, *core.words),
-                steps=(*core.steps[: core.first], output, *core.steps[core.first :], *(shift if k == 0 else ())),
+                words=(*(words if k == 0 else ()), *own),
+                steps=(*core.steps[: core.first], *after, *core.steps[core.first :], *(shift if k == 0 else ())),
                 source=source,
                 dest=word.name,
                 b=core.b,

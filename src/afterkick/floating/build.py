@@ -342,7 +342,8 @@ class _Wiring:
         from_y = [self._term(feedback, f"a{i}", a[i], self.dest, -1) for i in (1, 2)]
         first, second = (f"s{self.number}_{i}" for i in (1, 2))
         late = (*from_x[2], *from_y[1])
-        middle = (*(((1, second),) if late else ()), *from_y[0], *from_x[1])
+        # -a1 y and the second state nearly cancel where poles are near z = 1: first, so that little is rounded off b1 x
+        middle = ((1, second), *from_y[0], *from_x[1]) if late else (*from_x[1], *from_y[0])
         now = (*from_x[0], *(((1, first),) if middle else ()))
         self.states.extend([first, second] if late else [first] if middle else [])
         sums = [FloatSum(state, terms) for state, terms in ((first, middle), (second, late)) if terms]

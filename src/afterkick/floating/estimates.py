@@ -45,7 +45,8 @@ Grid = NDArray[np.complex128]
 class Noise:
     """Estimate: white, independent rounding errors of all products and sums, for a sine of the promised peak.
 
-    An input that hardly changes repeats its roundings: the output then rests several times ``rms`` beside its place.
+    Too low by several times where roundings repeat: for an input that hardly changes, and where 1 + a1 + a2 keeps only
+    a few bits more than are accepted.
     """
 
     rms: float

@@ -11,7 +11,7 @@ from afterkick.errors import Uncertified
 from afterkick.fixed.program import Program
 from afterkick.model.model import Model
 from afterkick.model.roots import Roots
-from afterkick.numbers import fraction, mid_float, to_text, working_bits
+from afterkick.numbers import fraction, mid_float, nearest_float, to_text, working_bits
 from afterkick.report.formulas import closed_form
 from afterkick.report.response import Kick
 from afterkick.sampling.response_errors import CONVENTION, ResponseErrors
@@ -154,7 +154,7 @@ def _fixed_data(found: Assessment) -> dict[str, Any]:
             }
             for section in program.sections
         ],
-        "dc_gain": None if found.dc_gain is None else float(fraction(found.dc_gain)),
+        "dc_gain": None if found.dc_gain is None else nearest_float(found.dc_gain),
         "dc_gain_exact": None if found.dc_gain is None else str(fraction(found.dc_gain)),
         "errors": _errors_data(found.shipped),
     }

@@ -1,9 +1,12 @@
 """What is proved about the integers, as text and as data."""
 
+from fractions import Fraction
 from math import isfinite
 from typing import Any
 
-from afterkick.fixed.bounds import Bounds, WordRange
+from afterkick.fixed.bounds import Bounds
+from afterkick.fixed.program import Program
+from afterkick.numbers import fraction
 
 __all__ = ["proof_data", "proof_rows"]
 
@@ -42,38 +45,42 @@ def proof_data(bounds: Bounds) -> dict[str, Any]:
     }
 
 
-def proof_rows(bounds: Bounds) -> list[tuple[str, str]]:
+def proof_rows(bounds: Bounds, program: Program) -> list[tuple[str, str]]:
     """(label, text) for the terminal."""
     rows = []
-    fullest = max(bounds.words, key=_filling)
-    noise = "" if bounds.noise_rms is None else f"; noise {bounds.noise_rms:.3g} counts r.m.s. (estimate)"
     if bounds.proved:
-        rows.append(("bounds", f"no word overflows for any input up to {bounds.peak_code} counts"))
+        fullest = max(bounds.words, key=lambda word: word.filling)
+        text = f"no word overflows for any input up to {bounds.peak_code} counts; the fullest is {fullest.word}, "
+        rows.append(("bounds", f"{text}{100 * fullest.filling:.4g} % full"))
     else:
         rows.append(("bounds", f"nothing is proved: {bounds.why_not}"))
-    if isfinite(_filling(fullest)):
-        rows.append(("  fullest", f"{fullest.word} at {100 * _filling(fullest):.4g} % of its word"))
+        rows += [("", remedy) for remedy in _remedies(bounds, program)]
     if bounds.output is not None:
         out = bounds.output
-        rows.append(
-            (
-                "  output",
-                f"off by at most {out.total:.4g} counts = coefficients {out.coefficients:.4g} + rounding "
-                f"{out.rounding:.4g} + sampling {out.sampling:.4g}",
-            )
-        )
-        rows.append(("  at rest", f"within {bounds.dead_band:.0f} counts of 0 long after the input has gone{noise}"))
-    elif noise:
-        rows.append(("  noise", noise.removeprefix("; noise ")))
+        parts = f"coefficients {out.coefficients:.4g} + rounding {out.rounding:.4g} + sampling {out.sampling:.4g}"
+        rows.append(("  output", f"off by at most {out.total:.4g} counts = {parts}"))
+        rows.append(("  at rest", f"within {bounds.dead_band:.0f} counts of 0 long after the input has gone"))
+    if bounds.noise_rms is not None:
+        rows.append(("  noise", f"{bounds.noise_rms:.3g} counts r.m.s. (estimate)"))
     if bounds.peak_reached is not None:
         reached = bounds.peak_reached
-        text = f"the worst input found reaches {reached.simulated:.0f} of {reached.bound:.4g} counts"
+        text = f"the worst input, simulated, drives the output to {reached.simulated:.0f} of {reached.bound:.4g} counts"
         rows.append(("  reached", f"{text} ({100 * reached.ratio:.2f} %)"))
     return rows
 
 
-def _filling(word: WordRange) -> float:
-    return max(word.highest / word.capacity_high, word.lowest / word.capacity_low)
+def _remedies(bounds: Bounds, program: Program) -> list[str]:
+    """What would make the proof go through, where that is a matter of scale."""
+    words = {word.word: word for word in bounds.overflowing}
+    output = words.get(program.output)
+    remedies = []
+    if output is not None and isfinite(output.filling):
+        needed = fraction(program.output_format.full_scale) * Fraction(output.filling)
+        unit = f" {program.output_format.unit}" if program.output_format.unit else ""
+        remedies.append(f"remedy: an output full_scale of {float(needed) * 1.001:.4g}{unit} or more, or a smaller peak")
+    if len(words) > (output is not None) and program.scaling == "none":
+        remedies.append('remedy: scaling = "peak-gain"')
+    return remedies
 
 
 def _finite(value: float) -> float | None:

@@ -8,7 +8,7 @@ from afterkick.errors import Problem, Refused
 from afterkick.fixed.program import Program
 from afterkick.fixed.simulate import simulate
 from afterkick.model.model import Model
-from afterkick.numbers import fraction, mid_float
+from afterkick.numbers import fraction, mid_float, nearest_float
 from afterkick.sampling.curves import Cancelling, Floats, Indices, analytic_curve, sampled_curve
 from afterkick.sampling.sampled import Sampled
 
@@ -68,13 +68,14 @@ def kick(model: Model, sampled: Sampled, program: Program, samples: int, amplitu
     output = program.word(program.output)
     period = float(fraction(sampled.period_s))
     dirac = mid_float(model.feedthrough())
-    unit = float(fraction(program.output_format.full_scale / program.input_format.full_scale)) / code
+    unit = nearest_float(program.output_format.full_scale / program.input_format.full_scale / code)
     late = sampled.delay_samples
     if sampled.fraction_s == 0 and late < samples:
         discrete[late] -= dirac
-    integer = counts.astype(np.float64) * unit
-    if sampled.fraction_s == 0 and late < samples:
-        integer[late] -= dirac
+    with np.errstate(over="ignore", invalid="ignore"):
+        integer = counts.astype(np.float64) * unit
+        if sampled.fraction_s == 0 and late < samples:
+            integer[late] -= dirac
     return Kick(
         code,
         dirac,

@@ -1,6 +1,7 @@
 """One screen for the terminal."""
 
 from collections.abc import Iterable, Mapping, Sequence
+from math import isfinite
 from typing import Any
 
 from flint import arb
@@ -9,7 +10,7 @@ from afterkick.design.schema import Design
 from afterkick.fixed.program import ProgramSection
 from afterkick.model.model import Model
 from afterkick.model.roots import Roots
-from afterkick.numbers import fraction, working_bits
+from afterkick.numbers import nearest_float, working_bits
 from afterkick.report.data import REPORT_BITS
 from afterkick.report.formulas import ball_text, closed_form, exact_text, number
 from afterkick.report.layout import LABEL, row
@@ -140,11 +141,11 @@ def _integers(section: ProgramSection) -> str:
 def _error_lines(found: Assessment) -> list[str]:
     exact, shipped = found.errors, found.shipped
     counts = 2 ** (found.program.data_bits - 1)
-    peak = float(fraction(found.program.input_format.peak / found.program.output_format.full_scale)) * counts
+    peak = nearest_float(found.program.input_format.peak / found.program.output_format.full_scale * counts)
     lines = [row("errors", f"{'':<40}{'sampled exactly':>20}{'with the integers':>22}")]
 
     def add(label: str, pick: str, values: Iterable[float | None], unit: str, absent: str = "none") -> None:
-        texts = [absent if value is None else _figure(value, unit) for value in values]
+        texts = [absent if value is None or not isfinite(value) else _figure(value, unit) for value in values]
         lines.append(f"{label:<{LABEL}}{pick:<40}{texts[0]:>20}{texts[1]:>22}")
 
     if exact.impulse is not None and shipped.impulse is not None:
@@ -224,7 +225,9 @@ def kick_text(design: Design, rows: Kick) -> str:
         lines.append(f"{rows.clipped} of the output codes are at the end of the word: a smaller --amplitude shows more")
     lines.append(f"{'n':>6} {'t [s]':>14} {'analytic h(t)':>16} {'sampled h[n]/T':>16} {'integer':>16} {'counts':>12}")
     columns = zip(rows.n, rows.t, rows.analytic, rows.sampled, rows.integer, rows.counts, strict=True)
-    lines += [f"{n:>6} {t:>14.8g} {h:>16.8g} {d:>16.8g} {i:>16.8g} {c:>12}" for n, t, h, d, i, c in columns]
+    for n, t, h, d, i, c in columns:
+        cells = " ".join(f"{value:>16.8g}" if isfinite(value) else f"{'none':>16}" for value in (h, d, i))
+        lines.append(f"{n:>6} {t:>14.8g} {cells} {c:>12}")
     return "\n".join(lines)
 
 
