@@ -313,7 +313,6 @@ WRONG: dict[str, tuple[str, str, list[str]]] = {
     "structure search later": (with_arithmetic('structure = "auto"'), "arithmetic.structure", ["not supported yet"]),
     "float32 later": (with_arithmetic('kind = "float32"'), "arithmetic.kind", ["float32", "not supported yet"]),
     "kind of arithmetic unknown": (with_arithmetic('kind = "float64"'), "arithmetic.kind", ['"fixed" or "float32"']),
-    "carry later": (with_arithmetic("carry = true"), "arithmetic.carry", ["not supported yet"]),
     "state bits later": (with_arithmetic("state_bits = 32"), "arithmetic.state_bits", ["not supported yet"]),
     "state bits below data bits": (with_arithmetic("state_bits = 8"), "arithmetic.state_bits", ["at least data_bits"]),
     "clamp later": (with_arithmetic("clamp = [-1, 1]"), "arithmetic.clamp", ["not supported yet"]),
@@ -379,7 +378,7 @@ def test_all_problems_are_reported_together() -> None:
     output = { full_scale = 1, peak = 2 }
     [arithmetic]
     structure = "delta"
-    carry = true
+    carry = 3
     [budget]
     band_hz = 60
     noise_counts = -1

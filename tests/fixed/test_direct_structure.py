@@ -207,7 +207,6 @@ def test_too_long_a_delay_is_refused():
         {"kind": "float32"},
         {"structure": "delta"},
         {"structure": "auto"},
-        {"carry": True},
         {"state_bits": 40},
         {"clamp": (fmpq(-1), fmpq(1))},
     ],

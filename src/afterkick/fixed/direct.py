@@ -11,6 +11,7 @@ from attrs import frozen
 from flint import fmpq
 
 from afterkick.errors import Problem, Refused
+from afterkick.fixed.carry import with_carry
 from afterkick.fixed.cascade import (
     SCALING_BITS,
     Builder,
@@ -87,7 +88,7 @@ def direct_program(
         raise Refused(problems)
     if search:
         sections, plans = _searched(sections, plans, builder, _dc_gain(sampled, signals))
-    return finished(
+    program = finished(
         _wire(sections, plans, exponents, builder, sampled.delay_samples),
         "direct",
         sampled,
@@ -97,6 +98,9 @@ def direct_program(
         title=title,
         digest=digest,
     )
+    if not arithmetic.carry:
+        return program
+    return with_carry(program, arithmetic.carry, widest_accumulator=builder.widest)
 
 
 @frozen
@@ -122,7 +126,6 @@ def _unsupported(arithmetic: "Arithmetic") -> list[Problem]:
     checks = [
         ("kind", arithmetic.kind, arithmetic.kind == "fixed", '"fixed"'),
         ("structure", arithmetic.structure, arithmetic.structure == "direct", '"direct"'),
-        ("carry", "true", not arithmetic.carry, "false"),
         ("state_bits", str(arithmetic.state_bits), arithmetic.state_bits in (None, arithmetic.data_bits), "data_bits"),
         ("clamp", "a clamp", arithmetic.clamp is None, "no clamp"),
     ]
