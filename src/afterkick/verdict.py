@@ -8,6 +8,7 @@ from flint import fmpq
 from afterkick.design.digest import digest
 from afterkick.design.schema import Design, Sampling
 from afterkick.fixed.bounds import Bounds, bounds
+from afterkick.fixed.choice import ChoiceReport, choice_report
 from afterkick.fixed.direct import direct_program
 from afterkick.fixed.program import Program, quantised_dc_gain
 from afterkick.fixed.realised import realised
@@ -53,6 +54,8 @@ class Assessment:
     """Of the filter with integer coefficients against the continuous model; the output rounding is left out."""
     dc_gain: fmpq | None
     """Of the integer coefficients, exact; None with an integrator."""
+    choice: ChoiceReport
+    """What the choice of the integers gained and kept."""
     bounds: Bounds
     budget: tuple[BudgetLine, ...]
 
@@ -87,6 +90,7 @@ def assess(design: Design) -> Assessment:
         errors,
         shipped,
         quantised_dc_gain(program),
+        choice_report(program, sampled),
         proofs,
         tuple(_budget_lines(design, model, shipped, proofs)),
     )

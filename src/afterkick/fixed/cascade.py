@@ -9,6 +9,7 @@ from attrs import evolve, frozen
 from flint import fmpq
 
 from afterkick.errors import Problem
+from afterkick.fixed.carry import WIDEST_ACCUMULATOR, with_carry
 from afterkick.fixed.narrow import rounding_offset
 from afterkick.fixed.program import (
     Move,
@@ -78,7 +79,7 @@ class Builder:
     @property
     def widest(self) -> int:
         """The widest accumulator that may be used."""
-        return self.accumulator_bits or 64
+        return self.accumulator_bits or WIDEST_ACCUMULATOR
 
     def width(self, terms: tuple[Term, ...], ranges: dict[str, Interval], right_shift: int) -> int | None:
         """The accumulator for a sum: the given one, else 32 bits where they suffice, else 64; None where none does."""
@@ -98,7 +99,7 @@ def finished(
     title: str,
     digest: str,
 ) -> Program:
-    """The Program of wired sections, from the word x to the word y.
+    """The Program of wired sections, from the word x to the word y, with the error feedback that is asked for.
 
     :raises Refused: where it is not valid.
     """
@@ -122,7 +123,9 @@ def finished(
         digest=digest,
     )
     require_valid(program)
-    return program
+    if not arithmetic.carry:
+        return program
+    return with_carry(program, arithmetic.carry, widest_accumulator=arithmetic.accumulator_bits or WIDEST_ACCUMULATOR)
 
 
 def delay_problems(delay_samples: int) -> list[Problem]:
@@ -247,16 +250,9 @@ def bits_of(reach: Interval) -> int:
 
 
 def unsupported(arithmetic: "Arithmetic") -> list[Problem]:
-    """One problem for each option that no structure but the direct one knows, or none at all."""
+    """One problem for each option that these structures don't know."""
     checks = [
         ("kind", arithmetic.kind, arithmetic.kind == "fixed", '"fixed"', 'write kind = "fixed"'),
-        (
-            "carry",
-            f'error feedback with structure = "{arithmetic.structure}"',
-            not arithmetic.carry,
-            'carry with structure = "direct"',
-            "remove carry: the states of this structure are wide enough to do without",
-        ),
         ("clamp", "a clamp", arithmetic.clamp is None, "no clamp", "remove clamp"),
     ]
     return [

@@ -5,9 +5,9 @@ With the poles r +- i q a section is
     w = d x + s1;  s1' = r s1 - q s2 + p1 x;  s2' = q s1 + r s2 + p2 x
 
 r and q lie on a uniform grid, so the poles do too, unlike those of the direct form, which are sparse near z = 1.  Zeros
-at z = 1, z = -1 and on the unit circle are kept exactly, by a section of their own in front, without poles.  The gain
-at z = 1 is not: it is as near as p2 brings it.  Real poles have no turn to make: their sections are those of the delta
-structure.
+at z = 1 and z = -1 are kept exactly, by a section of their own in front, without poles and without rounding.  Other
+zeros are as near as the last places of d, p1 and p2 bring them, and so is the gain at z = 1.  Real poles have no turn:
+their sections are those of the delta structure.
 """
 
 from collections.abc import Iterable
@@ -53,6 +53,14 @@ if TYPE_CHECKING:
 
 __all__ = ["coupled_program"]
 
+ZEROS = {
+    "at one": (1, -1, 0),
+    "at minus one": (1, 1, 0),
+    "at both": (1, 0, -1),
+    "twice at one": (1, -2, 1),
+    "twice at minus one": (1, 2, 1),
+}
+"""Zeros that are kept exactly, as polynomials in 1/z."""
 FRACTION_WITHOUT_NORM = 12
 """Stands in for log2 of the norm of a rounding error that never decays."""
 
@@ -97,7 +105,7 @@ class _Part:
     index: int
     """Of the section, from 0."""
     zeros: str = ""
-    """Those that are split off: "pair", "both", "one", "minus one", or none."""
+    """Those that are split off: a key of ZEROS, or none."""
     front: bool = False
     """Whether this is the section of these zeros, not that of the poles."""
     turns: bool = False
@@ -105,17 +113,14 @@ class _Part:
 
     def of(self, whole: Section) -> Section:
         """At the present working precision."""
-        b0, b1, b2 = whole.b
-        one, none = arb(1), arb(0)
-        if self.front:
-            bare = (one, none, none)
-            if self.zeros == "pair":
-                return Section((one, b1 / b0, one), bare)
-            kept = {"both": (none, -one), "one": (-one, none), "minus one": (one, none)}[self.zeros]
-            return Section((one, *kept), bare)
         if not self.zeros:
             return whole
-        rest = {"pair": none, "both": none, "one": -b2, "minus one": b2}[self.zeros]
+        b0, _, b2 = whole.b
+        one, none = arb(1), arb(0)
+        if self.front:
+            _, first, second = (arb(value) for value in ZEROS[self.zeros])
+            return Section((one, first, second), (one, none, none))
+        rest = {"at one": -b2, "at minus one": b2}.get(self.zeros, none)
         return Section((b0, rest, none), whole.a, a_at_one=whole.a_at_one)
 
 
@@ -126,13 +131,14 @@ def _parts(section: ExactSection, sampled: "Sampled") -> tuple[_Part, ...]:
         (b0, _, b2), (_, a1, a2) = exact.b, exact.a
         if exact.order == 1 or not a1 * a1 < 4 * a2:
             return (_Part(index),)
-        zeros = ""
-        if not b0.contains(0) and (b2 - b0).contains(0):
-            zeros = "pair"
-        elif section.zero_at_one and section.zero_at_minus_one:
-            zeros = "both"
-        elif section.zero_at_one or section.zero_at_minus_one:
-            zeros = "one" if section.zero_at_one else "minus one"
+        twice = not b0.contains(0) and (b2 - b0).contains(0)
+    zeros = ""
+    if section.zero_at_one and section.zero_at_minus_one:
+        zeros = "at both"
+    elif section.zero_at_one:
+        zeros = "twice at one" if twice else "at one"
+    elif section.zero_at_minus_one:
+        zeros = "twice at minus one" if twice else "at minus one"
     rest = _Part(index, zeros, False, True)
     return (_Part(index, zeros, True), rest) if zeros else (rest,)
 
@@ -146,14 +152,12 @@ def _core(section: ExactSection, frame: Frame) -> Core:
 
 
 def _zeros(section: ExactSection, frame: Frame) -> Core:
-    """The present and the two past inputs, without any rounding but that of the middle coefficient."""
-    number, bits = section.number, frame.builder.coefficient_bits
-    with working_bits(SCALING_BITS):
-        exact, _ = section.evaluate()
-    factors = [
-        ZERO if value.contains(0) else rounded(lambda: section.evaluate()[0][i], bits, f"section {number}")  # noqa: B023
-        for i, value in enumerate(exact)
-    ]
+    """The present and the past inputs, without any rounding."""
+    number = section.number
+    zeros = ZEROS[cast(_Split, section.sampled).parts[number - 1].zeros]
+    # the scaling is a power of two
+    scaling = int(section.gain.numerator).bit_length() - int(section.gain.denominator).bit_length()
+    factors = [Scaled(value, -scaling) for value in zeros]
     past = [f"h{number}a", f"h{number}b"][: 2 if factors[2].integer else 1]
     inner, wide = frame.source_fraction_bits, f"w{number}"
     sheet = Sheet(frame, [(name, frame.source_bits, inner) for name in past])
@@ -163,7 +167,7 @@ def _zeros(section: ExactSection, frame: Frame) -> Core:
         raise frame.too_narrow(number, frame.source_bits)
     first = len(sheet.sums)
     b, b_bits = over_power_of_two(*(factor.value for factor in factors))
-    rows = zip(("b0", "b1", "b2"), exact, factors, strict=True)
+    rows = zip(("b0", "b1", "b2"), (arb(value * section.gain) for value in zeros), factors, strict=True)
     return Core(
         tuple(
             evolve(word, fraction_bits=frame.source_place + inner) if word.role is Role.STATE else word

@@ -42,7 +42,7 @@ from afterkick.numbers import is_exactly_zero, mid_float, to_text, working_bits
 if TYPE_CHECKING:
     from afterkick.sampling.sampled import Section
 
-__all__ = ["delta_core"]
+__all__ = ["Numbers", "delta_core", "slope"]
 
 WITHOUT_NORM = 4
 """Fraction bits beyond log2 of a time constant where a rounding error never decays."""
@@ -80,8 +80,8 @@ class Integers:
     c: tuple[Scaled, ...]
     sum_of_others: bool
     """Whether n1 is not an integer of its own but 2 b0 + n2/2: a zero at z = -1."""
-    gain: Scaled | None = None
-    """Of the last c and n, where n is not an integer of its own but gain * c."""
+    gain: tuple[Scaled, ...] = ()
+    """Parts of the gain at z = 1, where the last n is not an integer of its own but gain * c."""
 
     @property
     def transfer(self) -> tuple[Triple, int, Triple, int]:
@@ -93,10 +93,11 @@ class Integers:
         return (*over_power_of_two(*b), *over_power_of_two(*a))
 
 
-def delta_core(section: ExactSection, frame: Frame, gain: Scaled | None = None) -> Core:
+def delta_core(section: ExactSection, frame: Frame, gain: tuple[Scaled, ...] = ()) -> Core:
     """The section with the longest coefficients whose sums fit the accumulator.
 
-    With ``gain``, the gain at z = 1 of a section with b0 = 0, the last state takes c (gain x - w) instead of n x - c w.
+    With ``gain``, whose sum is the gain at z = 1 of a section with b0 = 0, the last state takes c (gain x - w) instead
+    of n x - c w.
 
     :raises Refused: where a coefficient loses its meaning, or words or sums are too narrow.
     """
@@ -125,14 +126,14 @@ def _errors(section: ExactSection) -> tuple[FloatSection | int, ...]:
         alone = FloatSection((0.0, 1.0, 0.0), (-a2, 0.0), 0)
         return (0,) if len(exact.c) == 1 else (alone if abs(a2) < 1 else WITHOUT_NORM, 0)
     if endless_at(section):
-        slowness = math.ceil(-math.log2(_slope(exact)))
+        slowness = math.ceil(-math.log2(slope(exact)))
         return tuple(order * slowness + WITHOUT_NORM for order in range(1, len(exact.c) + 1))
     if len(exact.c) == 1:
         return (FloatSection((0.0, 1.0, 0.0), (a1, a2), 0),)
     return FloatSection((0.0, 1.0, -1.0), (a1, a2), 0), FloatSection((0.0, 0.0, 1.0), (a1, a2), 0)
 
 
-def _slope(exact: Numbers) -> float:
+def slope(exact: Numbers) -> float:
     """How much the output changes by in a sample at most, as a part of itself; never zero."""
     return max(abs(mid_float(exact.c[0])), math.sqrt(abs(mid_float(exact.c[-1]))), 2.0**-40)
 
@@ -144,7 +145,7 @@ def _shapes(section: ExactSection) -> tuple[FloatSection | int, ...]:
         (b0, b1, b2), (_, a1, a2) = exact.b, exact.a
         if endless_at(section):
             no_slope = all(c.contains(0) for c in exact.c)
-            return (1, 1 if no_slope else 1 + math.ceil(math.log2(_slope(exact))))[: len(exact.c)]
+            return (1, 1 if no_slope else 1 + math.ceil(math.log2(slope(exact))))[: len(exact.c)]
         first = ball_floats((arb(0), b1 - b0 * a1, b2 - b0 * a2), exact.a)
         if len(exact.c) == 1:
             return (first,)
@@ -163,7 +164,7 @@ def _exact_integrator(
     return (*fractions[:-1], max(fractions[-1], min(finest, room)))
 
 
-def _integers(section: ExactSection, bits: int, faint: int, gain: Scaled | None) -> Integers:
+def _integers(section: ExactSection, bits: int, faint: int, gain: tuple[Scaled, ...]) -> Integers:
     """The coefficients in words of ``bits`` bits, with what the exact section has of exact relations between them.
 
     ``faint`` gives up last places that the impulse response does not see: 1 those of n1, 2 those of n2 too, and with
@@ -184,9 +185,12 @@ def _integers(section: ExactSection, bits: int, faint: int, gain: Scaled | None)
 
     finest = _finest(exact, bits)
     last_n, last_c = stored("n", order, finest[order] if faint == 2 else None), stored("c", order - 1)
-    if gain is not None:
+    if gain:
         # one of a sum: its zeros are nobody's zeros
-        last_n = Scaled(gain.integer * last_c.integer, gain.fraction_bits + last_c.fraction_bits)
+        (integer, *_), fraction_bits = over_power_of_two(
+            sum((part.value for part in gain), Fraction(0)) * last_c.value, Fraction(0), Fraction(0)
+        )
+        last_n = Scaled(integer, fraction_bits)
         others = [] if order == 1 else [stored("n", 1)]
         return Integers((ZERO, *others, last_n), tuple([stored("c", 0), last_c][-order:]), False, gain)
     if last_n.integer and last_c.integer and faint < 2:
@@ -212,11 +216,11 @@ def _integers(section: ExactSection, bits: int, faint: int, gain: Scaled | None)
 
 
 def _finest(exact: Numbers, bits: int) -> list[int]:
-    """Fraction bits of each n beyond which last places are lost beside the largest one's part of the impulse response."""
-    slope = _slope(exact)
-    sizes = [number / slope**i for i, number in enumerate(exact.n)]
+    """Fraction bits of each n beyond which a last place is lost beside what the others do to the impulse response."""
+    rate = slope(exact)
+    sizes = [number / rate**i for i, number in enumerate(exact.n)]
     largest = max(floor_log2(size) for size in sizes if not size.contains(0))
-    return [bits + 1 - largest - math.floor(i * math.log2(slope)) for i in range(len(sizes))]
+    return [bits + 1 - largest - math.floor(i * math.log2(rate)) for i in range(len(sizes))]
 
 
 def _best_ratio(section: ExactSection, start: Scaled, bits: int) -> tuple[Scaled, Scaled]:
@@ -259,9 +263,10 @@ def _core(
     else:
         wide = states[0]
     first = len(sheet.sums)
-    if integers.gain is not None:
-        gap = max(integers.gain.fraction_bits + frame.source_fraction_bits, fractions[0])
-        weighed = [(integers.gain, frame.source, "gain"), (Scaled(-1, 0), wide, "")]
+    if integers.gain:
+        gap = max(fractions[0], *(part.fraction_bits + frame.source_fraction_bits for part in integers.gain))
+        weighed: list[Weighed] = [(part, frame.source, "gain") for part in integers.gain]
+        weighed.append((Scaled(-1, 0), wide, ""))
         if not sheet.temporary(f"e{number}", weighed, gap):
             return None
     for i in range(order):
@@ -276,7 +281,7 @@ def _core(
         driving.append((Scaled(-c.integer, c.fraction_bits), wide, f"alpha{i + 1}"))
         if i + 1 < order:
             driving.append((ONE, states[i + 1], ""))
-        elif integers.gain is not None:
+        elif integers.gain:
             driving = [(c, f"e{number}", f"alpha{i + 1}")]
         if not sheet.temporary(differences[i], driving, fractions[i]):
             return None
@@ -306,10 +311,9 @@ def _coefficients(section: ExactSection, integers: Integers, fractions: tuple[in
         rows = [("b0", exact.n[0], integers.n[0], 0)]
         rows += [(f"beta{i}", exact.n[i], integers.n[i], i * k) for i in range(1, len(exact.n))]
         rows += [(f"alpha{i}", exact.c[i - 1], integers.c[i - 1], i * k) for i in range(1, len(exact.c) + 1)]
-        if integers.gain is not None:
-            last = len(exact.n) - 1
-            at_one = exact.n[-1] / exact.c[-1]
-            rows = [row for row in rows if row[0] != f"beta{last}"] + [("gain", at_one, integers.gain, 0)]
+        if integers.gain:
+            rows = [row for row in rows if row[0] != f"beta{len(exact.n) - 1}"]
+            rows.append(("gain", exact.n[-1] / exact.c[-1], integers.gain[0], 0))
         if integers.sum_of_others:
             rows = [row for row in rows if row[0] != "beta1"]
         return tuple(

@@ -11,7 +11,6 @@ from attrs import frozen
 from flint import fmpq
 
 from afterkick.errors import Problem, Refused
-from afterkick.fixed.carry import with_carry
 from afterkick.fixed.cascade import (
     SCALING_BITS,
     Builder,
@@ -88,7 +87,7 @@ def direct_program(
         raise Refused(problems)
     if search:
         sections, plans = _searched(sections, plans, builder, _dc_gain(sampled, signals))
-    program = finished(
+    return finished(
         _wire(sections, plans, exponents, builder, sampled.delay_samples),
         "direct",
         sampled,
@@ -98,9 +97,6 @@ def direct_program(
         title=title,
         digest=digest,
     )
-    if not arithmetic.carry:
-        return program
-    return with_carry(program, arithmetic.carry, widest_accumulator=builder.widest)
 
 
 @frozen

@@ -5,6 +5,8 @@ gains of the parts at z = 1 lie on one grid, and the largest gives way so that t
 exactly where the grid has it.
 """
 
+import math
+from collections.abc import Callable
 from fractions import Fraction
 from typing import TYPE_CHECKING, cast
 
@@ -21,11 +23,11 @@ from afterkick.fixed.cascade import (
     signal_words,
     unsupported,
 )
-from afterkick.fixed.delta_core import delta_core
+from afterkick.fixed.delta_core import Numbers, delta_core, slope
 from afterkick.fixed.program import Coefficient, Program, ProgramSection, Role, Word
 from afterkick.fixed.quantise import PROBE_BITS, ExactSection, exact_sections
 from afterkick.fixed.scaling import FloatSection
-from afterkick.fixed.wide import Core, Frame, Scaled, floor_log2, output_sum, over_power_of_two, simplest
+from afterkick.fixed.wide import ZERO, Core, Frame, Scaled, floor_log2, output_sum, over_power_of_two, rounded, simplest
 from afterkick.numbers import fraction, mid_float, round_to_integer, to_text, working_bits
 from afterkick.sampling.sections import Section
 
@@ -94,8 +96,14 @@ class _Parts:
     def __init__(self, sampled: "Sampled") -> None:
         self.sampled = sampled
         self.marginal = sampled.marginal
+        self.known: dict[int, tuple[arb, tuple[Section, ...]]] = {}
 
     def _parts(self, bits: int) -> tuple[arb, tuple[Section, ...]]:
+        if bits not in self.known:
+            self.known[bits] = self._computed(bits)
+        return self.known[bits]
+
+    def _computed(self, bits: int) -> tuple[arb, tuple[Section, ...]]:
         found = self.sampled.parallel(bits)
         assert found is not None
         with working_bits(max(bits, ctx.prec)):
@@ -116,39 +124,55 @@ class _Parts:
         return self._parts(bits)[0]
 
 
-def _gains(parts: _Parts, sections: list[ExactSection], ratio: fmpq, bits: int) -> tuple[Scaled, list[Scaled | None]]:
-    """The direct part and the gain of each part at z = 1, None for a pole there, on one grid and with an exact sum."""
+def _gains(
+    parts: _Parts, sections: list[ExactSection], ratio: fmpq, bits: int
+) -> tuple[Scaled, list[tuple[Scaled, ...]]]:
+    """The direct part, and the gain of each part at z = 1, none for a pole there: on one grid and with an exact sum.
+
+    The part with the largest gain also takes away what the direct part adds at z = 1.
+    """
 
     def exact() -> list[arb]:
         whole = parts.sections(ctx.prec)
-        gains = [part.b_at_one * ratio / part.a_at_one for part, found in zip(whole, endless, strict=True) if not found]
-        return [parts.direct(ctx.prec) * ratio, *gains]
+        return [part.b_at_one * ratio / part.a_at_one for part, found in zip(whole, endless, strict=True) if not found]
 
     endless = [section.pole_at_one for section in sections]
     with working_bits(PROBE_BITS):
+        first = parts.direct(PROBE_BITS) * ratio
         probed = exact()
+        total = sum(probed, first)
+        # about the largest sample of the impulse response: the direct part need not be finer
+        peak = max(abs(mid_float(part.n[-1])) / slope(part) for part in map(Numbers.of, sections))
+    direct = ZERO
+    if not first.contains(0):
+        finest = bits + 2 - math.floor(math.log2(peak)) if peak else None
+        direct = rounded(lambda: parts.direct(ctx.prec) * ratio, bits, "the direct part", finest)
     largest = max((floor_log2(value) for value in probed if not value.contains(0)), default=0)
-    limit, grid = 1 << (bits - 1), bits - 1 - largest
+    limit, grid = 1 << (bits - 1), bits - largest
+    whole = not any(endless)
+    most = max(range(len(probed)), key=lambda i: abs(mid_float(probed[i])), default=0)
     while True:
-        power = fmpq(2) ** grid
-        integers = [
-            0 if value.contains(0) else round_to_integer(lambda: exact()[i] * power, "the gain of a part")  # noqa: B023
-            for i, value in enumerate(probed)
-        ]
-        if len(integers) > 1 and not any(endless):
-            most = max(range(1, len(integers)), key=lambda i: abs(integers[i]))
-            integers[most] += round(_whole_gain(probed) * Fraction(2) ** grid) - sum(integers)
-        if max(map(abs, integers)) <= limit:
+        integers = [_on_grid(lambda: exact()[i], value, grid) for i, value in enumerate(probed)]  # noqa: B023
+        if whole:
+            integers[most] += round(_simple(total) * Fraction(2) ** grid) - sum(integers)
+        if max(map(abs, integers), default=0) <= limit:
             break
         grid -= 1
-    rest = iter(integers[1:])
-    return Scaled(integers[0], grid), [None if found else Scaled(next(rest), grid) for found in endless]
+    gains: list[tuple[Scaled, ...]] = [(Scaled(integer, grid),) for integer in integers]
+    if whole and direct.integer:
+        gains[most] += (Scaled(-direct.integer, direct.fraction_bits),)
+    rest = iter(gains)
+    return direct, [() if found else next(rest) for found in endless]
 
 
-def _whole_gain(probed: list[arb]) -> Fraction:
-    """The gain of the filter at z = 1."""
+def _on_grid(compute: Callable[[], arb], probed: arb, grid: int) -> int:
+    if probed.contains(0):
+        return 0
+    return round_to_integer(lambda: compute() * fmpq(2) ** grid, "the gain of a part at z = 1")
+
+
+def _simple(total: arb) -> Fraction:
     with working_bits(PROBE_BITS):
-        total = sum(probed, arb(0))
         return Fraction(0) if total.contains(0) else simplest(total)
 
 

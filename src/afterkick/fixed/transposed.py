@@ -3,26 +3,31 @@
 y = (b0 x + s1) rounded;  s1' = b1 x - a1 y + s2;  s2' = b2 x - a2 y
 
 The states are sums of products at the scale of the sum: as wide as they need to be, they are exact, and a section
-rounds nowhere but at its output.  So with equal binary points it gives the bits of the direct structure, with two states
-instead of four words of history.  With ``state_bits`` the states are narrower and round too.
+rounds nowhere but at its output.  So with equal binary points it gives the bits of the direct structure, with two
+states instead of four words of history.  With ``state_bits`` the states are narrower and round too.
 """
 
 from typing import TYPE_CHECKING
 
 from attrs import frozen
+from flint import fmpq
 
 from afterkick.errors import Problem, Refused
 from afterkick.fixed.cascade import (
     SCALING_BITS,
     Builder,
+    Signal,
     bits_of,
     delay_problems,
     finished,
+    renamed,
     scaled,
     signal_chain,
     unsupported,
 )
+from afterkick.fixed.kept import exact_dc_gain
 from afterkick.fixed.program import Program, ProgramSection, Role, Sum, Term, Word
+from afterkick.fixed.pulse_grid import Integers
 from afterkick.fixed.quantise import (
     ExactSection,
     Triple,
@@ -33,6 +38,7 @@ from afterkick.fixed.quantise import (
     numerator_problems,
 )
 from afterkick.fixed.ranges import Interval, sum_range
+from afterkick.fixed.search import searched
 from afterkick.numbers import working_bits
 
 if TYPE_CHECKING:
@@ -43,9 +49,18 @@ __all__ = ["transposed_program"]
 
 
 def transposed_program(
-    sampled: "Sampled", arithmetic: "Arithmetic", signals: "Signals", name: str, *, title: str = "", digest: str = ""
+    sampled: "Sampled",
+    arithmetic: "Arithmetic",
+    signals: "Signals",
+    name: str,
+    *,
+    title: str = "",
+    digest: str = "",
+    search: bool = True,
 ) -> Program:
     """The integer filter that realises H * (input full scale / output full scale), transposed direct form II.
+
+    Without ``search`` every coefficient is the nearest integer, but for the exact zeros and poles that are kept.
 
     :raises Refused: with all problems of all sections: a coefficient that lost its meaning, a sum that no accumulator
         holds, a delay that is too long, or an option that this structure doesn't know.
@@ -54,39 +69,22 @@ def transposed_program(
     if problems:
         raise Refused(problems)
     sections, exponents = scaled(exact_sections(sampled), arithmetic.scaling, signals)
-    builder = Builder.of(arithmetic)
-    chain = signal_chain(builder.data_bits, exponents, sampled.delay_samples)
-    wired: list[ProgramSection] = []
-    for section, signal in zip(sections, chain, strict=True):
+    builder, state_bits = Builder.of(arithmetic), arithmetic.state_bits
+    plans: list[_Plan] = []
+    for section in sections:
         try:
-            plan = _plan(section, builder, arithmetic.state_bits, signal.source, signal.dest.name)
+            plans.append(_plan(section, builder, state_bits))
         except Refused as refusal:
             problems += refusal.problems
-            continue
-        with working_bits(SCALING_BITS):
-            coefficients = section.coefficients(plan.b, plan.b_bits, plan.a, plan.a_bits)
-        states = tuple(
-            Word(step.dest, bits, signal.dest.fraction_bits + scale, Role.STATE)
-            for step, bits, scale in zip(plan.steps[1:], plan.state_bits, plan.state_scales, strict=True)
-        )
-        wired.append(
-            ProgramSection(
-                words=(*signal.words, *states),
-                steps=(*plan.steps, *signal.moves),
-                source=signal.source,
-                dest=signal.dest.name,
-                b=plan.b,
-                b_fraction_bits=plan.b_bits,
-                a=plan.a,
-                a_fraction_bits=plan.a_bits,
-                coefficients=coefficients,
-                gain_log2=signal.gain_log2,
-                marginal=section.marginal,
-            )
-        )
     if problems:
         raise Refused(problems)
-    return finished(tuple(wired), "transposed", sampled, arithmetic, signals, name, title=title, digest=digest)
+    if search:
+        gain = exact_dc_gain(sampled)
+        whole = None if gain is None else gain * signals.input.full_scale / signals.output.full_scale
+        sections, plans = _searched(sections, plans, builder, state_bits, whole)
+    chain = signal_chain(builder.data_bits, exponents, sampled.delay_samples)
+    wired = tuple(_wired(*each) for each in zip(sections, plans, chain, strict=True))
+    return finished(wired, "transposed", sampled, arithmetic, signals, name, title=title, digest=digest)
 
 
 @frozen
@@ -97,13 +95,14 @@ class _Plan:
     b_bits: int
     a: Triple
     a_bits: int
-    steps: tuple[Sum, ...]
+    sums: tuple[Sum, ...]
+    """Of the words x and y, which the wiring then renames."""
     state_bits: tuple[int, ...]
     state_scales: tuple[int, ...]
     """Fraction bits of each state, counted from the last place of the output."""
 
 
-def _plan(section: ExactSection, builder: Builder, state_bits: int | None, source: str, dest: str) -> _Plan:
+def _plan(section: ExactSection, builder: Builder, state_bits: int | None) -> _Plan:
     """The finest binary points whose sums fit the accumulator.
 
     :raises Refused: where a coefficient loses its meaning or no accumulator holds the worst case.
@@ -121,7 +120,7 @@ def _plan(section: ExactSection, builder: Builder, state_bits: int | None, sourc
             raise Refused(problems)
         if problems:
             break
-        plan = _attempt(section, b, b_bits, a, a_bits, builder, state_bits, source, dest)
+        plan = _attempt(section.number, Integers(b, b_bits, a, a_bits), builder, state_bits)
         if plan is not None:
             return plan
         fits = False
@@ -139,37 +138,49 @@ def _plan(section: ExactSection, builder: Builder, state_bits: int | None, sourc
     )
 
 
-def _attempt(
-    section: ExactSection,
-    b: Triple,
-    b_bits: int,
-    a: Triple,
-    a_bits: int,
+def _searched(
+    sections: tuple[ExactSection, ...],
+    plans: list[_Plan],
     builder: Builder,
     state_bits: int | None,
-    source: str,
-    dest: str,
-) -> _Plan | None:
-    """The section's sums at these binary points; None where one of them is too wide."""
+    dc_gain: fmpq | None,
+) -> tuple[tuple[ExactSection, ...], list[_Plan]]:
+    """The sections, with the gains they now have, and their plans after the search."""
+
+    def plan(section: ExactSection, one: Integers) -> _Plan | None:
+        problems = denominator_problems(section, one.a, one.a_bits) + numerator_problems(section, one.b, one.b_bits)
+        if problems or max(map(abs, one.a + one.b)) > 1 << (builder.coefficient_bits - 1):
+            return None
+        return _attempt(section.number, one, builder, state_bits)
+
+    plain = [Integers(one.b, one.b_bits, one.a, one.a_bits) for one in plans]
+    chosen = searched(sections, plain, dc_gain, lambda section, one: plan(section, one) is not None)
+    found = [(section, plan(section, one)) for section, one in chosen]
+    return tuple(section for section, _ in found), [one for _, one in found if one is not None]
+
+
+def _attempt(number: int, one: Integers, builder: Builder, state_bits: int | None) -> _Plan | None:
+    """The section's sums with these integers; None where one of them is too wide."""
+    b, a = one.b, one.a
     feedback = any(a[1:])
-    scale = max(a_bits, b_bits) if feedback else max(b_bits, 0)
-    up, back = scale - b_bits, scale - a_bits
-    ranges = {source: Interval.of_word(builder.data_bits), dest: Interval.of_word(builder.data_bits)}
+    scale = max(one.a_bits, one.b_bits) if feedback else max(one.b_bits, 0)
+    up, back = scale - one.b_bits, scale - one.a_bits
+    ranges = {"x": Interval.of_word(builder.data_bits), "y": Interval.of_word(builder.data_bits)}
     previous: str | None = None
     drop = 0
     sums: list[Sum] = []
     widths: list[int] = []
     scales: list[int] = []
     for order in (2, 1, 0):
-        listed = [Term(b[order], source, up, f"b{order}")] if b[order] else []
+        listed = [Term(b[order], "x", up, f"b{order}")] if b[order] else []
         if order and a[order]:
-            listed.append(Term(-a[order], dest, back, f"a{order}"))
+            listed.append(Term(-a[order], "y", back, f"a{order}"))
         if previous:
             listed.append(Term(1, previous, drop))
         terms = tuple(listed)
         if order and not terms:
             continue
-        result = dest if order == 0 else f"s{section.number}{'ab'[order - 1]}"
+        result = "y" if order == 0 else f"s{number}{'ab'[order - 1]}"
         places = scale
         if order:
             places = 0 if state_bits is None else _places_to_drop(terms, ranges, state_bits, builder)
@@ -185,7 +196,31 @@ def _attempt(
             scales.append(scale - places)
             previous, drop = result, places
     # the output first, and each state before the one that feeds it
-    return _Plan(b, b_bits, a, a_bits, tuple(reversed(sums)), tuple(reversed(widths)), tuple(reversed(scales)))
+    listed = tuple(reversed(sums)), tuple(reversed(widths)), tuple(reversed(scales))
+    return _Plan(b, one.b_bits, a, one.a_bits, *listed)
+
+
+def _wired(section: ExactSection, plan: _Plan, signal: Signal) -> ProgramSection:
+    states = tuple(
+        Word(step.dest, bits, signal.dest.fraction_bits + scale, Role.STATE)
+        for step, bits, scale in zip(plan.sums[1:], plan.state_bits, plan.state_scales, strict=True)
+    )
+    names = {state.name: state.name for state in states} | {"x": signal.source, "y": signal.dest.name}
+    with working_bits(SCALING_BITS):
+        coefficients = section.coefficients(plan.b, plan.b_bits, plan.a, plan.a_bits)
+    return ProgramSection(
+        words=(*signal.words, *states),
+        steps=(*(renamed(step, names) for step in plan.sums), *signal.moves),
+        source=signal.source,
+        dest=signal.dest.name,
+        b=plan.b,
+        b_fraction_bits=plan.b_bits,
+        a=plan.a,
+        a_fraction_bits=plan.a_bits,
+        coefficients=coefficients,
+        gain_log2=signal.gain_log2,
+        marginal=section.marginal,
+    )
 
 
 def _places_to_drop(terms: tuple[Term, ...], ranges: dict[str, Interval], bits: int, builder: Builder) -> int:

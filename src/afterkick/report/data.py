@@ -13,6 +13,7 @@ from afterkick.model.model import Model
 from afterkick.model.roots import Roots
 from afterkick.numbers import fraction, mid_float, nearest_float, to_text, working_bits
 from afterkick.report.formulas import closed_form
+from afterkick.report.proofs import proof_data
 from afterkick.report.response import Kick
 from afterkick.sampling.response_errors import CONVENTION, ResponseErrors
 from afterkick.sampling.sampled import Sampled
@@ -37,7 +38,7 @@ def check_data(found: Assessment) -> dict[str, Any]:
         "sampling": _sampling_data(found.sampled),
         "errors": _errors_data(found.errors),
         "fixed": _fixed_data(found),
-        "bounds": {"status": "not supported yet"},
+        "bounds": proof_data(found.bounds),
         "budget": [
             {"item": line.item, "limit": line.limit, "found": line.found, "holds": line.holds, "remark": line.remark}
             for line in found.budget

@@ -14,6 +14,7 @@ from afterkick.numbers import nearest_float, working_bits
 from afterkick.report.data import REPORT_BITS
 from afterkick.report.formulas import ball_text, closed_form, exact_text, number
 from afterkick.report.layout import LABEL, row
+from afterkick.report.proofs import proof_rows
 from afterkick.report.response import Kick
 from afterkick.sampling.response_errors import CONVENTION, ResponseErrors
 from afterkick.targets import TargetProfile
@@ -50,6 +51,7 @@ def check_text(found: Assessment) -> str:
     """The whole assessment, at most a screen for a design of a few sections."""
     lines = [headline(found), ""]
     lines += _model_lines(found) + _sampling_lines(found) + _fixed_lines(found) + _error_lines(found)
+    lines += [row(*labelled) for labelled in proof_rows(found.bounds, found.program)]
     lines += _budget_lines(found.budget)
     lines += [row("warning", text) for text in (*found.model.warnings, *found.sampled.warnings)]
     return "\n".join(lines)
@@ -128,7 +130,13 @@ def _fixed_lines(found: Assessment) -> list[str]:
     lines = [row("integers", f"{program.structure}, {words}, {rounding}, {program.overflow.value}")]
     for k, section in enumerate(program.sections, start=1):
         lines.append(row(f"  section {k}", _integers(section), formula=True))
-    return lines
+    choice = found.choice
+    before, after = (f"{100 * error:.3g} %" for error in (choice.nearest_error, choice.chosen_error))
+    lines.append(row("  choice", f"peak impulse error {after} of the exact filter's; nearest integers {before}"))
+    names = ", ".join(
+        one.name if one.section is None else f"{one.name} of section {one.section}" for one in choice.gave_way
+    )
+    return [*lines, row("", f"not kept exactly: {names}")] if names else lines
 
 
 def _integers(section: ProgramSection) -> str:
