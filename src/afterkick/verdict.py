@@ -1,6 +1,6 @@
 """The end of the road: everything found about one design, judged against its budget."""
 
-from functools import cached_property
+from functools import cache, cached_property
 
 from attrs import frozen
 from flint import fmpq
@@ -9,9 +9,9 @@ from afterkick.design.digest import digest
 from afterkick.design.schema import Design, Sampling
 from afterkick.fixed.bounds import Bounds, bounds
 from afterkick.fixed.choice import ChoiceReport, choice_report
-from afterkick.fixed.direct import direct_program
 from afterkick.fixed.program import Program, quantised_dc_gain
 from afterkick.fixed.realised import realised
+from afterkick.fixed.structures import Candidate, build_program, candidates, chosen
 from afterkick.model.forms import model_of
 from afterkick.model.model import Model
 from afterkick.numbers import fraction
@@ -54,8 +54,10 @@ class Assessment:
     """Of the filter with integer coefficients against the continuous model; the output rounding is left out."""
     dc_gain: fmpq | None
     """Of the integer coefficients, exact; None with an integrator."""
-    choice: ChoiceReport
-    """What the choice of the integers gained and kept."""
+    choice: ChoiceReport | None
+    """What the choice of the integers gained and kept; None for structures whose coefficients are others."""
+    tried: tuple[Candidate, ...]
+    """For structure "auto": every structure with its cost, the cheapest first."""
     bounds: Bounds
     budget: tuple[BudgetLine, ...]
 
@@ -77,22 +79,38 @@ def assess(design: Design) -> Assessment:
     sampled = sample(model, design.sampling)
     name = design.design.name
     mark = digest(design)
-    program = direct_program(sampled, design.arithmetic, design.signals, name, title=design.design.title, digest=mark)
-    errors = response_errors(sampled, design.budget.band_hz)
-    shipped = response_errors(realised(program, sampled), design.budget.band_hz)
-    proofs = bounds(program, sampled, _held(model, sampled))
+    held = _held(model, sampled)
+
+    @cache
+    def judged(program: Program) -> tuple[ResponseErrors, Bounds, tuple[BudgetLine, ...]]:
+        shipped = response_errors(realised(program, sampled), design.budget.band_hz)
+        proofs = bounds(program, sampled, held)
+        return shipped, proofs, tuple(_budget_lines(design, model, shipped, proofs))
+
+    def shortfalls(program: Program) -> list[str]:
+        return [line.item for line in judged(program)[2] if not line.holds and line.item != "instructions"]
+
+    road = (sampled, design.arithmetic, design.signals, name)
+    tried: tuple[Candidate, ...] = ()
+    if design.arithmetic.structure == "auto":
+        tried = candidates(*road, title=design.design.title, digest=mark, judge=shortfalls)
+        program = chosen(tried)
+    else:
+        program = build_program(*road, title=design.design.title, digest=mark)
+    shipped, proofs, budget = judged(program)
     return Assessment(
         design,
         model,
         sampled,
         program,
         mark,
-        errors,
+        response_errors(sampled, design.budget.band_hz),
         shipped,
         quantised_dc_gain(program),
-        choice_report(program, sampled),
+        choice_report(program, sampled) if program.structure in ("direct", "transposed") else None,
+        tried,
         proofs,
-        tuple(_budget_lines(design, model, shipped, proofs)),
+        budget,
     )
 
 

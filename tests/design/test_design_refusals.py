@@ -309,11 +309,9 @@ WRONG: dict[str, tuple[str, str, list[str]]] = {
     "overflow unknown": (with_arithmetic('overflow = "saturated"'), "arithmetic.overflow", ['did you mean "saturate"']),
     "scaling unknown": (with_arithmetic('scaling = "two norm"'), "arithmetic.scaling", ['did you mean "two-norm"']),
     "structure unknown": (with_arithmetic('structure = "directly"'), "arithmetic.structure", ['did you mean "direct"']),
-    "structure later": (with_arithmetic('structure = "delta"'), "arithmetic.structure", ["delta", "not supported yet"]),
-    "structure search later": (with_arithmetic('structure = "auto"'), "arithmetic.structure", ["not supported yet"]),
     "float32 later": (with_arithmetic('kind = "float32"'), "arithmetic.kind", ["float32", "not supported yet"]),
     "kind of arithmetic unknown": (with_arithmetic('kind = "float64"'), "arithmetic.kind", ['"fixed" or "float32"']),
-    "state bits later": (with_arithmetic("state_bits = 32"), "arithmetic.state_bits", ["not supported yet"]),
+    "state bits not used": (with_arithmetic("state_bits = 32"), "arithmetic.state_bits", ['"direct"', '"transposed"']),
     "state bits below data bits": (with_arithmetic("state_bits = 8"), "arithmetic.state_bits", ["at least data_bits"]),
     "clamp later": (with_arithmetic("clamp = [-1, 1]"), "arithmetic.clamp", ["not supported yet"]),
     "clamp exchanged": (with_arithmetic("clamp = [1, -1]"), "arithmetic.clamp", ["low less than high"]),
@@ -377,7 +375,7 @@ def test_all_problems_are_reported_together() -> None:
     [signals]
     output = { full_scale = 1, peak = 2 }
     [arithmetic]
-    structure = "delta"
+    structure = "delay"
     carry = 3
     [budget]
     band_hz = 60

@@ -9,7 +9,7 @@ from flint import fmpq
 from afterkick.cli.common import HOLDS, json_option, load, print_json, reported, targets_option
 from afterkick.design.limits import visible
 from afterkick.errors import Problem, Refused
-from afterkick.fixed.direct import direct_program
+from afterkick.fixed.structures import build_program
 from afterkick.model.forms import model_of
 from afterkick.numbers import rational
 from afterkick.report.data import kick_data
@@ -32,7 +32,7 @@ def command(design: Path, samples: int, amplitude: str | None, targets: Path | N
         found = load(design, targets)
         model = model_of(found)
         sampled = sample(model, found.sampling)
-        program = direct_program(sampled, found.arithmetic, found.signals, found.design.name)
+        program = build_program(sampled, found.arithmetic, found.signals, found.design.name)
         size = found.signals.input.peak_or_full_scale if amplitude is None else _amplitude(amplitude)
         rows = kick(model, sampled, program, samples, size)
         if as_json:

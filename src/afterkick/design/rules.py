@@ -173,8 +173,6 @@ def _signals(table: SimpleNamespace, given: AbstractSet[str]) -> Iterator[Proble
 def _arithmetic(table: SimpleNamespace, given: AbstractSet[str]) -> Iterator[Problem]:
     if table.kind == "float32":
         yield _later("kind", table.kind, '"fixed"', 'write kind = "fixed"')
-    if table.structure not in (None, "direct"):
-        yield _later("structure", table.structure, '"direct"', 'write structure = "direct"')
     if table.clamp is not None:
         low, high = table.clamp
         if low < high:
@@ -188,8 +186,13 @@ def _arithmetic(table: SimpleNamespace, given: AbstractSet[str]) -> Iterator[Pro
             yield Problem(
                 "state_bits", str(table.state_bits), f"at least data_bits, {table.data_bits}", "widen the states"
             )
-        else:
-            yield _later("state_bits", table.state_bits, "a file without state_bits", "remove state_bits")
+        elif table.structure == "direct":
+            yield Problem(
+                "state_bits",
+                'a key that the structure "direct" does not use: its states are data words',
+                'only with "transposed", "delta", "coupled", "parallel" or "auto"',
+                "remove state_bits, or choose another structure",
+            )
 
 
 def _later(key: str, value: object, accepted: str, remedy: str) -> Problem:

@@ -196,8 +196,8 @@ def _attempt(number: int, one: Integers, builder: Builder, state_bits: int | Non
             scales.append(scale - places)
             previous, drop = result, places
     # the output first, and each state before the one that feeds it
-    listed = tuple(reversed(sums)), tuple(reversed(widths)), tuple(reversed(scales))
-    return _Plan(b, one.b_bits, a, one.a_bits, *listed)
+    order_of_steps = tuple(reversed(sums)), tuple(reversed(widths)), tuple(reversed(scales))
+    return _Plan(b, one.b_bits, a, one.a_bits, *order_of_steps)
 
 
 def _wired(section: ExactSection, plan: _Plan, signal: Signal) -> ProgramSection:

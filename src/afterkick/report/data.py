@@ -142,6 +142,7 @@ def _fixed_data(found: Assessment) -> dict[str, Any]:
         "structure": program.structure,
         "data_bits": program.data_bits,
         "coefficient_bits": program.coefficient_bits,
+        "carry": program.carry,
         "rounding": program.rounding.value,
         "overflow": program.overflow.value,
         "sections": [
@@ -155,6 +156,24 @@ def _fixed_data(found: Assessment) -> dict[str, Any]:
             }
             for section in program.sections
         ],
+        "tried": [
+            {
+                "structure": one.structure,
+                "carry": one.carry,
+                "operations": one.operations,
+                "falls_short": None if one.falls_short is None else list(one.falls_short),
+                "refused": [str(problem) for problem in one.refused],
+                "taken": one.program is program,
+            }
+            for one in found.tried
+        ],
+        "choice": None
+        if found.choice is None
+        else {
+            "nearest_impulse_error": found.choice.nearest_error,
+            "chosen_impulse_error": found.choice.chosen_error,
+            "gave_way": [{"name": one.name, "section": one.section} for one in found.choice.gave_way],
+        },
         "dc_gain": None if found.dc_gain is None else nearest_float(found.dc_gain),
         "dc_gain_exact": None if found.dc_gain is None else str(fraction(found.dc_gain)),
         "errors": _errors_data(found.shipped),

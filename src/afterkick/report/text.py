@@ -7,7 +7,8 @@ from typing import Any
 from flint import arb
 
 from afterkick.design.schema import Design
-from afterkick.fixed.program import ProgramSection
+from afterkick.fixed.program import Program, ProgramSection
+from afterkick.fixed.structures import Candidate
 from afterkick.model.model import Model
 from afterkick.model.roots import Roots
 from afterkick.numbers import nearest_float, working_bits
@@ -130,13 +131,31 @@ def _fixed_lines(found: Assessment) -> list[str]:
     lines = [row("integers", f"{program.structure}, {words}, {rounding}, {program.overflow.value}")]
     for k, section in enumerate(program.sections, start=1):
         lines.append(row(f"  section {k}", _integers(section), formula=True))
+    lines += [_candidate(one, program) for one in found.tried]
     choice = found.choice
+    if choice is None:
+        return lines
     before, after = (f"{100 * error:.3g} %" for error in (choice.nearest_error, choice.chosen_error))
     lines.append(row("  choice", f"peak impulse error {after} of the exact filter's; nearest integers {before}"))
     names = ", ".join(
         one.name if one.section is None else f"{one.name} of section {one.section}" for one in choice.gave_way
     )
     return [*lines, row("", f"not kept exactly: {names}")] if names else lines
+
+
+def _candidate(one: Candidate, chosen: Program) -> str:
+    """A structure that "auto" tried, with what it costs and why it was or was not taken."""
+    name = one.structure + (f", carry {one.carry}" if one.carry else "")
+    if one.program is None:
+        verdict = f"refused: {one.refused[0].found}"
+    elif one.program is chosen:
+        verdict = "taken"
+    elif one.falls_short is None:
+        verdict = "dearer"
+    else:
+        verdict = f"falls short: {', '.join(one.falls_short)}"
+    cost = "" if one.operations is None else f"{one.operations} operations, "
+    return row("  tried", f"{name}: {cost}{verdict}")
 
 
 def _integers(section: ProgramSection) -> str:
