@@ -158,7 +158,8 @@ def _impulse_figures(shipped: ResponseErrors) -> dict[str, tuple[float | None, s
         None if value is None else 100 * value for value in (impulse.peak, impulse.rms, impulse.peak_aligned)
     )
     nothing = "the analytic response is zero at every sample"
-    late = "" if aligned is None else f"{aligned:.2g} % apart from a delay of {impulse.delay_samples:.3g} T"
+    delay = impulse.delay_samples
+    late = "" if aligned is None or not delay else f"{aligned:.2g} % apart from a delay of {delay:.3g} T"
     return {
         "impulse_peak_percent": (peak, nothing if peak is None else late),
         "impulse_rms_percent": (rms, nothing if rms is None else ""),

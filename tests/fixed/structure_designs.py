@@ -65,6 +65,11 @@ MODELS = {
     "pi": blocks(Pid(fmpq(2), fmpq(3))),
 }
 STABLE = tuple(name for name in MODELS if not name.startswith(("integrator", "pi")))
+# A repeated pole has no sum of parts: see test_refusals_name_section_and_remedy.
+CASES = tuple(
+    (structure, model) for structure in NEW for model in MODELS if (structure, model) != ("parallel", "equal lags")
+)
+STABLE_CASES = tuple((structure, model) for structure, model in CASES if model in STABLE)
 
 HALF = Signals(Signal("V", fmpq(1), fmpq(1, 2)), Signal("V", fmpq(1)))
 """Half of full scale is promised, so that an overshoot has room."""

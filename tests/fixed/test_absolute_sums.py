@@ -1,4 +1,4 @@
-"""Absolute sums and energies of pulse responses: closed forms, brute force, and limits that must not be needlessly wide.
+"""Absolute sums and energies of pulse responses: closed forms, brute force, and limits that must not be too wide.
 
 Source of the closed forms: A. V. Oppenheim and R. W. Schafer, Discrete-Time Signal Processing, sections 6.9 and 6.10
 (noise gain of a second-order section), and the geometric series; the figures below were derived from them and checked
@@ -40,7 +40,10 @@ def all_pole(r: float, theta: float) -> RationalResponse:
 def brute_force(found: RationalResponse, terms: int) -> mpmath.mpf:
     """The same sum by recursion in 60-digit arithmetic, up to a geometric rest."""
     with mpmath.workdps(60):
-        top, bottom = ([mpmath.mpf(int(c.p)) / int(c.q) for c in p.coeffs()] for p in (found.numerator, found.denominator))
+        top, bottom = (
+            [mpmath.mpf(int(c.p)) / int(c.q) for c in polynomial.coeffs()]
+            for polynomial in (found.numerator, found.denominator)
+        )
         past: list[mpmath.mpf] = []
         total = mpmath.mpf(0)
         for n in range(terms):

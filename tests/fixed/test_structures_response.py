@@ -11,9 +11,9 @@ from afterkick.fixed.realised import realised
 from afterkick.numbers import working_bits
 from fixed.structure_designs import (
     BUILD,
-    MODELS,
-    NEW,
+    CASES,
     STABLE,
+    STABLE_CASES,
     WIDE,
     at,
     build,
@@ -25,13 +25,6 @@ from fixed.structure_designs import (
 from helpers import ratio, sampled
 
 METHODS = ("zero-order-hold", "bilinear")
-
-
-# A repeated pole has no sum of parts: refused, see test_refusals_name_section_and_remedy.
-CASES = [
-    (structure, model) for structure in NEW for model in MODELS if (structure, model) != ("parallel", "equal lags")
-]
-STABLE_CASES = [(structure, model) for structure, model in CASES if model in STABLE]
 
 
 def built(structure, model, rate, method, **arithmetic):
@@ -100,7 +93,7 @@ def test_rational_gain_at_zero_frequency_is_exact(structure, model, rate):
     found = dc_gain(build(structure, at(model, rate)))
     if model == "elliptic 6":
         # of even order: at 0 Hz the ripple is at its bottom, 10^(-1/40)
-        assert float(found) == pytest.approx(10 ** (-1 / 40), rel=2e-5)
+        assert float(found) == pytest.approx(10 ** (-1 / 40), rel=5e-5)
     elif structure == "parallel" and model == "gain 10/3":
         assert float(found) == pytest.approx(10 / 3, rel=2e-5)
     else:

@@ -142,7 +142,11 @@ def _gains(
         probed = exact()
         total = sum(probed, first)
         # about the largest sample of the impulse response: the direct part need not be finer
-        peak = max(abs(mid_float(part.n[-1])) / slope(part) for part in map(Numbers.of, sections))
+        peak = max(
+            abs(mid_float(number)) / slope(part) ** i
+            for part in map(Numbers.of, sections)
+            for i, number in enumerate(part.n[1:])
+        )
     direct = ZERO
     if not first.contains(0):
         finest = bits + 2 - math.floor(math.log2(peak)) if peak else None

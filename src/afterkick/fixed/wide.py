@@ -251,7 +251,10 @@ class Sheet:
         builder = self.frame.builder
         step = Sum(dest, terms, width, places, builder.rounding, builder.overflow)
         self.ranges[dest], self.fractions[dest] = sum_range(step, self.ranges).result, fraction_bits
-        self.words.append(Word(dest, bits_of(self.ranges[dest]), self.frame.place + fraction_bits, Role.TEMPORARY))
+        # as much in either direction: the bounds take inputs of both signs to be equally large
+        reach = max(self.ranges[dest].highest, -self.ranges[dest].lowest)
+        bits = bits_of(Interval(-reach, reach))
+        self.words.append(Word(dest, bits, self.frame.place + fraction_bits, Role.TEMPORARY))
         self.sums.append(step)
         return True
 

@@ -13,7 +13,7 @@ from functools import lru_cache
 from itertools import combinations
 
 from attrs import field, frozen
-from flint import acb, arb, ctx, fmpq, fmpq_poly, fmpz_poly
+from flint import acb, acb_poly, arb, ctx, fmpq, fmpq_poly, fmpz_poly
 
 from afterkick.errors import Problem, Refused, Uncertified
 from afterkick.numbers import LOWEST_BITS, decided_sign, mid_float, working_bits
@@ -207,8 +207,29 @@ def algebraic_roots(polynomial: fmpq_poly, unit: str) -> dict[Root, int]:
 
 def _first_isolation(coefficients: tuple[int, ...]) -> tuple[acb, ...]:
     """The balls that name each root: at 128 bits whatever the caller's precision, so that an index never changes."""
+    _refuse_near_coincidence(coefficients)
     with working_bits(LOWEST_BITS):
         return _isolated(coefficients, LOWEST_BITS)
+
+
+def _refuse_near_coincidence(coefficients: tuple[int, ...]) -> None:
+    """Isolating roots that agree in thousands of bits would keep the machine busy for minutes.
+
+    :raises Refused: such a polynomial.
+    """
+    if len(coefficients) <= 3:
+        return
+    try:
+        acb_poly([acb(value) for value in coefficients]).roots(maxprec=4096)
+    except ValueError:
+        raise Refused(
+            Problem(
+                "model",
+                f"a polynomial factor of order {len(coefficients) - 1} with roots that 4096 bits can't tell apart",
+                "roots that are equal exactly, or distinct",
+                'give the model as factors: kind = "blocks" or "roots"',
+            )
+        ) from None
 
 
 def quadratic_roots(coefficients: Callable[[], tuple[arb, arb, arb]], key: tuple[Hashable, ...]) -> dict[Root, int]:

@@ -8,7 +8,7 @@ from flint import arb, fmpq
 from afterkick.model.partial_fractions import Mode
 from afterkick.numbers import fraction, mid_float, to_text
 
-__all__ = ["ball_text", "closed_form", "exact_text", "number"]
+__all__ = ["ball_text", "closed_form", "counted", "exact_text", "number"]
 
 
 _LONGEST_NUMBER = 24
@@ -64,3 +64,8 @@ def _mode_terms(mode: Mode, power: int, re: arb, im: arb, variable: str) -> list
         for amplitude, wave in factors
         if not amplitude.contains(0)
     ]
+
+
+def counted(number_of: int, noun: str) -> str:
+    """1 sample, 2 samples."""
+    return f"{number_of} {noun}" if number_of == 1 else f"{number_of} {noun}s"

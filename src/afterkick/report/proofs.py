@@ -7,6 +7,7 @@ from typing import Any
 from afterkick.fixed.bounds import Bounds
 from afterkick.fixed.program import Program
 from afterkick.numbers import fraction
+from afterkick.report.formulas import counted
 
 __all__ = ["proof_data", "proof_rows"]
 
@@ -59,7 +60,8 @@ def proof_rows(bounds: Bounds, program: Program) -> list[tuple[str, str]]:
         out = bounds.output
         parts = f"coefficients {out.coefficients:.4g} + rounding {out.rounding:.4g} + sampling {out.sampling:.4g}"
         rows.append(("  output", f"off by at most {out.total:.4g} counts = {parts}"))
-        rows.append(("  at rest", f"within {bounds.dead_band:.0f} counts of 0 long after the input has gone"))
+        rest = counted(int(bounds.dead_band or 0), "count")
+        rows.append(("  at rest", f"within {rest} of 0 long after the input has gone"))
     if bounds.noise_rms is not None:
         rows.append(("  noise", f"{bounds.noise_rms:.3g} counts r.m.s. (estimate)"))
     if bounds.peak_reached is not None:

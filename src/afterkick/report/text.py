@@ -13,7 +13,7 @@ from afterkick.model.model import Model
 from afterkick.model.roots import Roots
 from afterkick.numbers import nearest_float, working_bits
 from afterkick.report.data import REPORT_BITS
-from afterkick.report.formulas import ball_text, closed_form, exact_text, number
+from afterkick.report.formulas import ball_text, closed_form, counted, exact_text, number
 from afterkick.report.layout import LABEL, row
 from afterkick.report.proofs import proof_rows
 from afterkick.report.response import Kick
@@ -109,7 +109,7 @@ def _jumps_text(model: Model) -> str:
 
 def _sampling_lines(found: Assessment) -> list[str]:
     sampled = found.sampled
-    delay = f", {sampled.delay_samples} samples of delay" if sampled.delay_samples else ""
+    delay = f", {counted(sampled.delay_samples, 'sample')} of delay" if sampled.delay_samples else ""
     state = "" if sampled.stable else ", marginal" if sampled.marginal else ", UNSTABLE"
     lines = [row("sampling", f"{sampled.method} at {exact_text(sampled.rate_hz)} Hz{delay}{state}")]
     for k, section in enumerate(sampled.sections(REPORT_BITS), start=1):
