@@ -126,7 +126,7 @@ def bounds(program: Program, sampled: Sampled, held: Sampled | None) -> Bounds:
     worst = WorstCase(program)
     output = next(word for word in worst.ranges if word.word == program.output)
     to_output = worst.to_input[program.output]
-    unbounded = _unbounded(worst.ranges) if sampled.stable else "the sampled filter is not stable"
+    unbounded = _unbounded(worst.ranges) if sampled.stable else _not_stable(sampled)
     proved = not unbounded and all(word.fits for word in worst.ranges)
     return Bounds(
         worst.peak_code,
@@ -211,11 +211,16 @@ def _down(value: float) -> float:
     return -_up(-value)
 
 
+def _not_stable(sampled: Sampled) -> str:
+    what = "an integrator or undamped mode never forgets" if sampled.marginal else "the filter is unstable"
+    return f"unbounded: {what}, so that only its word limits the output"
+
+
 def _unbounded(words: tuple[WordRange, ...]) -> str:
     names = [word.word for word in words if word.highest == inf]
     if not names:
         return ""
-    return f"the response of {', '.join(names)} does not decay, so only saturation limits it"
+    return f"unbounded: the response of {', '.join(names)} does not decay, so that only the word limits it"
 
 
 def _output_error(

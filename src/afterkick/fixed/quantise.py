@@ -34,7 +34,7 @@ ENOUGH_LAST_PLACES = 8
 PROBE_BITS = 256
 """Where exact cancellations are looked for: a sum that is zero to this many bits is taken as zero."""
 KEY = "arithmetic.coefficient_bits"
-REMEDY = "wider coefficients; else a delta or coupled structure (in a later version); else a lower sampling rate"
+REMEDY = 'wider coefficients; else structure = "delta" or "coupled"; else a lower sampling rate'
 
 Triple = tuple[int, int, int]
 Balls = tuple[arb, arb, arb]
