@@ -264,10 +264,9 @@ def _core(
         wide = states[0]
     first = len(sheet.sums)
     if integers.gain:
-        gap = max(fractions[0], *(part.fraction_bits + frame.source_fraction_bits for part in integers.gain))
         weighed: list[Weighed] = [(part, frame.source, "gain") for part in integers.gain]
         weighed.append((Scaled(-1, 0), wide, ""))
-        if not sheet.temporary(f"e{number}", weighed, gap):
+        if not sheet.temporary(f"e{number}", weighed, fractions[0]):
             return None
     for i in range(order):
         driving: list[Weighed] = [(integers.n[i + 1], frame.source, f"beta{i + 1}")]

@@ -75,7 +75,7 @@ def parallel_program(
         place,
         (FloatSection((peak, 0.0, 0.0), (0.0, 0.0), 0),),
         (),
-        3 * len(sections),
+        4 * len(sections),
     )
     direct, gains = _gains(parts, sections, ratio, builder.coefficient_bits)
     cores = []

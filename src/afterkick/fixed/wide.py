@@ -229,7 +229,9 @@ class Sheet:
         self.frame = frame
         self.words: list[Word] = []
         self.sums: list[Sum] = []
-        self.ranges = {frame.source: Interval.of_word(frame.source_bits)}
+        # as far up as down: the bounds take the input to be as large in either direction
+        peak = 1 << (frame.source_bits - 1)
+        self.ranges = {frame.source: Interval(-peak, peak)}
         self.fractions = {frame.source: frame.source_fraction_bits}
         for name, bits, fraction_bits in states:
             self.ranges[name], self.fractions[name] = Interval.of_word(bits), fraction_bits
@@ -251,10 +253,7 @@ class Sheet:
         builder = self.frame.builder
         step = Sum(dest, terms, width, places, builder.rounding, builder.overflow)
         self.ranges[dest], self.fractions[dest] = sum_range(step, self.ranges).result, fraction_bits
-        # as much in either direction: the bounds take inputs of both signs to be equally large
-        reach = max(self.ranges[dest].highest, -self.ranges[dest].lowest)
-        bits = bits_of(Interval(-reach, reach))
-        self.words.append(Word(dest, bits, self.frame.place + fraction_bits, Role.TEMPORARY))
+        self.words.append(Word(dest, bits_of(self.ranges[dest]), self.frame.place + fraction_bits, Role.TEMPORARY))
         self.sums.append(step)
         return True
 
