@@ -16,6 +16,7 @@ from afterkick.report.data import kick_data
 from afterkick.report.response import kick
 from afterkick.report.text import kick_text
 from afterkick.sampling import sample
+from afterkick.verdict import assess
 
 __all__ = ["command"]
 
@@ -32,7 +33,10 @@ def command(design: Path, samples: int, amplitude: str | None, targets: Path | N
         found = load(design, targets)
         model = model_of(found)
         sampled = sample(model, found.sampling)
-        program = build_program(sampled, found.arithmetic, found.signals, found.design.name)
+        # what "auto" takes depends on the budget
+        automatic = found.arithmetic.structure == "auto"
+        road = (sampled, found.arithmetic, found.signals, found.design.name)
+        program = assess(found).program if automatic else build_program(*road)
         size = found.signals.input.peak_or_full_scale if amplitude is None else _amplitude(amplitude)
         rows = kick(model, sampled, program, samples, size)
         if as_json:
