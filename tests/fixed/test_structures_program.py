@@ -193,7 +193,7 @@ def test_every_input_stays_within_the_bounds(structure, model):
     assert np.max(np.abs(simulate(program, inputs[0]))) >= 0.98 * (output.from_input) - 1
 
 
-@pytest.mark.parametrize("rate", [20, 1000, 30_000])
+@pytest.mark.parametrize("rate", [20, 5000])
 @pytest.mark.parametrize("model", ["low-pass 2", "low-pass 8", "elliptic 6", "notch", "resonator"])
 @pytest.mark.parametrize("structure", WIDE)
 def test_states_round_less_than_half_a_count(structure, model, rate):
@@ -202,7 +202,7 @@ def test_states_round_less_than_half_a_count(structure, model, rate):
         program = build(structure, at(model, rate))
     except Refused:
         assert structure == "coupled"
-        assert rate == 30_000
+        assert rate == 5000
         return
     ranges = {one.word: one for one in WorstCase(program).ranges}
     assert ranges["y"].from_rounding < 1

@@ -219,7 +219,7 @@ def _finest(exact: Numbers, bits: int) -> list[int]:
     """Fraction bits of each n beyond which a last place is lost beside what the others do to the impulse response."""
     rate = slope(exact)
     sizes = [number / rate**i for i, number in enumerate(exact.n)]
-    largest = max(floor_log2(size) for size in sizes if not size.contains(0))
+    largest = max((floor_log2(size) for size in sizes if not size.contains(0)), default=0)
     return [bits + 1 - largest - math.floor(i * math.log2(rate)) for i in range(len(sizes))]
 
 

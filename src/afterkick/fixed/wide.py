@@ -53,8 +53,8 @@ LEAST_COEFFICIENT_BITS = 6
 BITS_OF_INT = 32
 SIMPLEST = 1 << 16
 """A gain between 1/2 and 4 with a denominator up to this is taken as the rational it is."""
-ENDLESS = 200
-"""A norm above 2^ENDLESS is no norm."""
+LARGEST_NORM_LOG2 = 200
+"""What is more is taken as this: the states are at their widest long before."""
 
 
 @frozen
@@ -121,6 +121,12 @@ def endless_at(section: ExactSection) -> bool:
     return section.marginal or section.unstable
 
 
+def silent(number: int) -> Problem:
+    """A section without any gain."""
+    where = f"section {number}"
+    return Problem(where, "the filter's gain is zero", "a filter that passes something", "check the model")
+
+
 def ball_floats(b: Sequence[arb], a: Sequence[arb]) -> FloatSection:
     """A section in doubles; the exponent takes up the size of its numerator."""
     exponent = max((floor_log2(x) for x in b if not x.contains(0)), default=0)
@@ -158,7 +164,7 @@ class Frame:
         found = []
         for error in errors:
             norm = error if isinstance(error, int) else norm_exponents([error, *self.after], "peak-gain")[-1]
-            found.append(max(0 if norm is None else min(norm, ENDLESS) + spare, 0))
+            found.append(max(0 if norm is None else min(norm, LARGEST_NORM_LOG2) + spare, 0))
         return tuple(found)
 
     def reaches(self, shapes: Sequence[FloatSection | int]) -> tuple[int, ...]:
@@ -218,6 +224,12 @@ class Frame:
         )
 
 
+def _either_way(bits: int) -> Interval:
+    """A word's range, as far up as down: the bounds take the input to be as large in either direction."""
+    peak = 1 << (bits - 1)
+    return Interval(-peak, peak)
+
+
 Weighed = tuple[Scaled, str, str]
 """A factor, the word it multiplies, and a label."""
 
@@ -229,12 +241,10 @@ class Sheet:
         self.frame = frame
         self.words: list[Word] = []
         self.sums: list[Sum] = []
-        # as far up as down: the bounds take the input to be as large in either direction
-        peak = 1 << (frame.source_bits - 1)
-        self.ranges = {frame.source: Interval(-peak, peak)}
+        self.ranges = {frame.source: _either_way(frame.source_bits)}
         self.fractions = {frame.source: frame.source_fraction_bits}
         for name, bits, fraction_bits in states:
-            self.ranges[name], self.fractions[name] = Interval.of_word(bits), fraction_bits
+            self.ranges[name], self.fractions[name] = _either_way(bits), fraction_bits
             self.words.append(Word(name, bits, frame.place + fraction_bits, Role.STATE))
 
     def temporary(self, dest: str, weighed: Sequence[Weighed], fraction_bits: int) -> bool:
@@ -329,6 +339,8 @@ def wide_cascade(
         # an output without a norm is limited by its state, to twice the full scale
         before = (evolve(driven, b=(2.0, 0.0, 0.0)),) if endless_at(section) else (*before, floats[k])
         try:
+            if section.largest_numerator_log2() is None:
+                raise Refused(silent(section.number))
             core = make(section, frame)
         except Refused as refusal:
             problems += refusal.problems
