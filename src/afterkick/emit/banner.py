@@ -92,11 +92,11 @@ def listed(heading: str, items: tuple[str, ...]) -> tuple[str, ...]:
 
 def _filter(program: Program) -> Iterator[str]:
     count = len(program.sections)
+    sections = f"{count} section{'s' if count > 1 else ''}"
+    together = "in parallel" if program.structure == "parallel" else "in cascade"
+    sampling = f"sampled by {program.method} at {decimal(program.rate_hz)} Hz"
     yield ""
-    yield from comment_lines(
-        f"The filter: {count} section{'s' if count > 1 else ''} in cascade, structure {program.structure}, sampled by "
-        f"{program.method} at {decimal(program.rate_hz)} Hz."
-    )
+    yield from comment_lines(f"The filter: {sections} {together}, structure {program.structure}, {sampling}.")
     for number, section in enumerate(program.sections, start=1):
         yield from comment_lines(f"H{number}(z) = {_transfer(section)}", "  ")
     gain = quantised_dc_gain(program)

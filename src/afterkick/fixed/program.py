@@ -279,10 +279,12 @@ def with_accumulator(program: Program, dest: str, bits: int) -> Program:
 
 def quantised_dc_gain(program: Program) -> fmpq | None:
     """The exact DC gain of the integer coefficients, in output units per input unit; None with a pole at z = 1."""
-    gain = program.output_format.full_scale / program.input_format.full_scale
+    product, total = fmpq(1), fmpq(0)
     for section in program.sections:
         numerator, denominator = sum(section.b), sum(section.a)
         if denominator == 0:
             return None
-        gain *= fmpq(numerator, denominator) * fmpq(2) ** (section.a_fraction_bits - section.b_fraction_bits)
-    return gain
+        gain = fmpq(numerator, denominator) * fmpq(2) ** (section.a_fraction_bits - section.b_fraction_bits)
+        product, total = product * gain, total + gain
+    of_codes = program.output_format.full_scale / program.input_format.full_scale
+    return of_codes * (total if program.structure == "parallel" else product)

@@ -130,7 +130,8 @@ def _fixed_lines(found: Assessment) -> list[str]:
     words = f"{program.data_bits}-bit data, {program.coefficient_bits}-bit coefficients"
     lines = [row("integers", f"{program.structure}, {words}, {rounding}, {program.overflow.value}")]
     for k, section in enumerate(program.sections, start=1):
-        lines.append(row(f"  section {k}", _integers(section), formula=True))
+        shown = _integers(section) if program.structure in ("direct", "transposed") else _named(section)
+        lines.append(row(f"  section {k}", shown, formula=True))
     lines += [_candidate(one, program) for one in found.tried]
     choice = found.choice
     if choice is None:
@@ -141,6 +142,11 @@ def _fixed_lines(found: Assessment) -> list[str]:
         one.name if one.section is None else f"{one.name} of section {one.section}" for one in choice.gave_way
     )
     return [*lines, row("", f"not kept exactly: {names}")] if names else lines
+
+
+def _named(section: ProgramSection) -> str:
+    """The coefficients of a structure whose own are not b and a."""
+    return "; ".join(f"{c.name} {c.integer} / 2^{c.fraction_bits}" for c in section.coefficients)
 
 
 def _candidate(one: Candidate, chosen: Program) -> str:
