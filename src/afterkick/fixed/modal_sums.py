@@ -21,7 +21,7 @@ from afterkick.numbers import certified, working_bits
 
 __all__ = ["AbsoluteSum", "ModalResponse", "absolute_sum", "difference", "modal_response", "values"]
 
-BLOCK = 1024
+BLOCK = 4096
 LONGEST = 1 << 23
 """Samples after which the tail bound is taken as it is."""
 TAIL = 2.0**-24
@@ -99,7 +99,7 @@ def absolute_sum(response: ModalResponse) -> AbsoluteSum:
         block, slack = _block(response.modes, start)
         total = float(np.sum(np.abs(block)))
         squares += float(block @ block)
-        # pairwise or not, a float sum of 1024 terms is within 1024 unit round-offs
+        # pairwise or not, a float sum of BLOCK terms is within BLOCK unit round-offs
         rounding = total * BLOCK * UNIT_ROUNDOFF + slack
         lower, upper = _down(lower + max(total - rounding, 0.0)), _up(upper + total + rounding)
         start += BLOCK

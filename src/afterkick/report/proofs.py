@@ -1,15 +1,17 @@
 """What is proved about the integers, as text and as data."""
 
-from fractions import Fraction
 from math import isfinite
 from typing import Any
 
 from afterkick.fixed.bounds import Bounds
 from afterkick.fixed.program import Program
-from afterkick.numbers import fraction
+from afterkick.numbers import nearest_float
 from afterkick.report.formulas import counted
 
 __all__ = ["proof_data", "proof_rows"]
+
+ROOM = 1.001
+"""What a remedy leaves for roundings."""
 
 
 def proof_data(bounds: Bounds) -> dict[str, Any]:
@@ -73,15 +75,18 @@ def proof_rows(bounds: Bounds, program: Program) -> list[tuple[str, str]]:
 
 def _remedies(bounds: Bounds, program: Program) -> list[str]:
     """What would make the proof go through, where that is a matter of scale."""
-    words = {word.word: word for word in bounds.overflowing}
-    output = words.get(program.output)
     remedies = []
-    if output is not None and isfinite(output.filling):
-        needed = fraction(program.output_format.full_scale) * Fraction(output.filling)
-        unit = f" {program.output_format.unit}" if program.output_format.unit else ""
-        remedies.append(f"remedy: an output full_scale of {float(needed) * 1.001:.4g}{unit} or more, or a smaller peak")
-    if len(words) > (output is not None) and program.scaling == "none":
-        remedies.append('remedy: scaling = "peak-gain"')
+    for word in bounds.overflowing:
+        if not isfinite(word.filling):
+            continue
+        if word.word == program.output:
+            needed = nearest_float(program.output_format.full_scale) * word.filling * ROOM
+            size = f"{needed:.4g} {program.output_format.unit}".rstrip()
+            remedies.append(f"remedy: an output full_scale of {size} or more, or a smaller peak")
+        elif not remedies:
+            peak = nearest_float(program.input_format.peak) / word.filling / ROOM
+            size = f"{peak:.4g} {program.input_format.unit}".rstrip()
+            remedies.append(f"remedy for {word.word}: promise an input peak of {size} or less")
     return remedies
 
 
