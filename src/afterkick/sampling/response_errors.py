@@ -126,26 +126,26 @@ def response_errors(sampled: Sampled, band_hz: fmpq | None = None) -> ResponseEr
     )
 
 
-def _time_errors(
-    sampled: Sampled, horizon: int
-) -> tuple[ImpulseError | None, StepError | None, float | None, float | None]:
-    """Impulse, step, and the worst difference for staircase inputs at and between the samples."""
+_TimeErrors = tuple[ImpulseError | None, StepError | None, float | None, float | None]
+"""Impulse, step, and the worst difference for staircase inputs at and between the samples."""
+
+
+def _time_errors(sampled: Sampled, horizon: int) -> _TimeErrors:
     if sampled.model.relative_degree < 0:
         return None, None, None, None
     with np.errstate(over="ignore", invalid="ignore", under="ignore"):
         try:
-            comparison = _Comparison.of(sampled, grid(horizon, _POINTS), exact=False)
+            return _compared(_Comparison.of(sampled, grid(horizon, _POINTS), exact=False))
         except Cancelling:
-            comparison = _Comparison.of(sampled, grid(horizon, _EXACT_POINTS), exact=True)
-        impulse, step = comparison.impulse(), comparison.step()
-        if not (sampled.stable and sampled.model.stability == "stable"):
-            return impulse, step, None, None
-        return (
-            impulse,
-            step,
-            _finite(comparison.staircase_at_samples()),
-            _finite(comparison.staircase_between_samples()),
-        )
+            return _compared(_Comparison.of(sampled, grid(horizon, _EXACT_POINTS), exact=True))
+
+
+def _compared(comparison: "_Comparison") -> _TimeErrors:
+    impulse, step = comparison.impulse(), comparison.step()
+    if not (comparison.sampled.stable and comparison.sampled.model.stability == "stable"):
+        return impulse, step, None, None
+    between = _finite(comparison.staircase_between_samples())
+    return impulse, step, _finite(comparison.staircase_at_samples()), between
 
 
 def _finite(value: float) -> float | None:
