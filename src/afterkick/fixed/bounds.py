@@ -180,7 +180,7 @@ class WorstCase:
 
     def _range(self, name: str) -> WordRange:
         word = self.program.word(name)
-        reach = self.peak_code * self._sum(self.to_input[name]).upper
+        reach = _up(self.peak_code * self._sum(self.to_input[name]).upper)
         up = down = 0.0
         for source, responses in self.to_rounding.items():
             response = responses[name]
@@ -189,8 +189,10 @@ class WorstCase:
             size = float(fraction(source.radius)) * self._sum(response).upper
             total = response.total
             shift = 0.0 if total is None else float(fraction(source.mean * total))
-            up += _up(size + shift)
-            down += _up(size - shift)
+            # the two may cancel: what their conversions and products rounded is far below this part of either
+            slack = (size + abs(shift)) * 2.0**-48
+            up = _up(up + _up(size + shift + slack))
+            down = _up(down + _up(size - shift + slack))
         return WordRange(name, _down(-reach - down), _up(reach + up), reach, max(up, down), word.lowest, word.highest)
 
     @cached_property

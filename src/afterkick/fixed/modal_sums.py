@@ -149,26 +149,31 @@ def _block(modes: Sequence[Mode], start: int) -> tuple[Floats, float]:
     """h[start] .. h[start + BLOCK - 1] without the first samples, and a bound of the sum of their errors."""
     k0 = start - 1
     weights: list[complex] = []
+    radii: list[float] = []
     tables: list[NDArray[np.complex128]] = []
-    for mode in modes:
-        scale = 1 if mode.real else 2
-        times = len(mode.coefficients)
-        powers = [mode.pole ** (k0 - d) if k0 >= d else acb(0) for d in range(times)]
-        for i in range(times):
-            weight = sum((mode.coefficients[j] * comb(k0, j - i) * powers[j - i] for j in range(i, times)), acb(0))
-            weights.append(_to_complex(weight * scale))
-            tables.append(_powers(*_exact_parts(mode.pole), i))
+    with working_bits(POWER_BITS):
+        for mode in modes:
+            scale = 1 if mode.real else 2
+            times = len(mode.coefficients)
+            powers = [mode.pole ** (k0 - d) if k0 >= d else acb(0) for d in range(times)]
+            for i in range(times):
+                parts = (mode.coefficients[j] * comb(k0, j - i) * powers[j - i] for j in range(i, times))
+                weight = sum(parts, acb(0)) * scale
+                weights.append(_to_complex(weight))
+                radii.append(_up(float(weight.rad().upper())))
+                tables.append(_powers(*_exact_parts(mode.pole), i))
     factor, table = np.array(weights), np.array(tables)
     found: Floats = factor.real @ table.real - factor.imag @ table.imag
-    sizes = float(np.sum(np.abs(factor) @ np.abs(table)))
+    lengths = np.sum(np.abs(table), axis=1)
+    sizes = float(np.abs(factor) @ lengths)
     # conversions to float64 (one round-off each), products and sums: each at most so many round-offs of the sizes;
-    # the last term is for powers that underflow
-    slack = (2 * len(weights) + 16) * UNIT_ROUNDOFF * sizes * (1 + 1e-9) + 1e-280 * float(np.sum(np.abs(factor)))
-    return found, slack
+    # then the radii of the weights; the last term is for powers that underflow
+    slack = (2 * len(weights) + 16) * UNIT_ROUNDOFF * sizes + float(np.array(radii) @ lengths)
+    return found, slack * (1 + 1e-9) + 1e-280 * float(np.sum(np.abs(factor)))
 
 
 def _to_complex(value: acb) -> complex:
-    """The midpoint; its radius is far below a unit round-off of the magnitude, or the value is as good as zero."""
+    """The midpoint, as the nearest doubles."""
     return complex(float(value.real.mid()), float(value.imag.mid()))
 
 
