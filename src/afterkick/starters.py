@@ -15,6 +15,7 @@ STARTERS = {
     "bilge": "zeros and poles",
     "yaw": "a slow pole at a high rate",
     "echo": "a circuit to be replaced, with dead time",
+    "helm": "a controller, its integral held within limits",
 }
 """Name and what the design shows."""
 

@@ -1,6 +1,8 @@
 """The end of the road: everything found about one design, judged against its budget."""
 
+from collections.abc import Sequence
 from functools import cache, cached_property
+from typing import TYPE_CHECKING
 
 from attrs import frozen
 from flint import fmpq
@@ -11,14 +13,19 @@ from afterkick.fixed.bounds import Bounds, bounds
 from afterkick.fixed.choice import ChoiceReport, choice_report
 from afterkick.fixed.program import Program, quantised_dc_gain
 from afterkick.fixed.realised import realised
-from afterkick.fixed.structures import Candidate, build_program, candidates, chosen
+from afterkick.fixed.relax import Relaxation
+from afterkick.fixed.settled import StepOffset, settled_offsets, step_codes
+from afterkick.fixed.structures import Candidate, candidates, chosen
 from afterkick.model.forms import model_of
 from afterkick.model.model import Model
 from afterkick.numbers import fraction
 from afterkick.sampling import Sampled, sample
 from afterkick.sampling.response_errors import ResponseErrors, response_errors
 
-__all__ = ["Assessment", "BudgetLine", "assess"]
+if TYPE_CHECKING:
+    from afterkick.floating import FloatEstimates, FloatProgram
+
+__all__ = ["Assessment", "BudgetLine", "FixedPoint", "SinglePrecision", "assess"]
 
 HOLDS, FALLS_SHORT, UNKNOWN = "holds", "falls short", "unknown"
 
@@ -40,18 +47,10 @@ class BudgetLine:
 
 
 @frozen(eq=False)
-class Assessment:
-    """One design after the whole road."""
+class FixedPoint:
+    """What ships as integers."""
 
-    design: Design
-    model: Model
-    sampled: Sampled
     program: Program
-    digest: str
-    errors: ResponseErrors
-    """Of the exact sampled filter against the continuous model."""
-    shipped: ResponseErrors
-    """Of the filter with integer coefficients against the continuous model; the output rounding is left out."""
     dc_gain: fmpq | None
     """Of the integer coefficients, exact; None with an integrator."""
     choice: ChoiceReport | None
@@ -59,6 +58,34 @@ class Assessment:
     tried: tuple[Candidate, ...]
     """For structure "auto": every structure with its cost, the cheapest first."""
     bounds: Bounds
+    relaxation: Relaxation | None
+    """What the proof saved; None where the design doesn't ask for it."""
+    settled: tuple[StepOffset, ...]
+    """Steps of several sizes; none where nothing is proved, or the filter integrates."""
+
+
+@frozen(eq=False)
+class SinglePrecision:
+    """What ships as singles."""
+
+    program: "FloatProgram"
+    estimates: "FloatEstimates"
+
+
+@frozen(eq=False)
+class Assessment:
+    """One design after the whole road."""
+
+    design: Design
+    model: Model
+    sampled: Sampled
+    digest: str
+    errors: ResponseErrors
+    """Of the exact sampled filter against the continuous model."""
+    realisation: FixedPoint | SinglePrecision
+    """What ``arithmetic.kind`` asks for."""
+    shipped: ResponseErrors
+    """Of the filter with the stored coefficients against the continuous model; the rounding of results is left out."""
     budget: tuple[BudgetLine, ...]
 
     @cached_property
@@ -77,41 +104,62 @@ def assess(design: Design) -> Assessment:
     """
     model = model_of(design)
     sampled = sample(model, design.sampling)
-    name = design.design.name
     mark = digest(design)
+    realise = _single_precision if design.arithmetic.kind == "float32" else _fixed_point
+    realisation, shipped, budget = realise(design, sampled, mark)
+    errors = response_errors(sampled, design.budget.band_hz)
+    return Assessment(design, model, sampled, mark, errors, realisation, shipped, tuple(budget))
+
+
+def _fixed_point(
+    design: Design, sampled: Sampled, mark: str
+) -> tuple[FixedPoint, ResponseErrors, Sequence[BudgetLine]]:
+    model = sampled.model
     held = _held(model, sampled)
 
     @cache
-    def judged(program: Program) -> tuple[ResponseErrors, Bounds, tuple[BudgetLine, ...]]:
+    def judged(program: Program) -> tuple[ResponseErrors, Bounds, Sequence[BudgetLine]]:
         shipped = response_errors(realised(program, sampled), design.budget.band_hz)
         proofs = bounds(program, sampled, held)
-        return shipped, proofs, tuple(_budget_lines(design, model, shipped, proofs))
+        return shipped, proofs, _budget_lines(design, model, shipped, _proved_figures(proofs))
 
     def shortfalls(program: Program) -> list[str]:
         return [line.item for line in judged(program)[2] if not line.holds and line.item != "instructions"]
 
-    road = (sampled, design.arithmetic, design.signals, name)
-    tried: tuple[Candidate, ...] = ()
-    if design.arithmetic.structure == "auto":
-        tried = candidates(*road, title=design.design.title, digest=mark, judge=shortfalls)
-        program = chosen(tried)
-    else:
-        program = build_program(*road, title=design.design.title, digest=mark)
+    road = (sampled, design.arithmetic, design.signals, design.design.name)
+    listed = candidates(*road, title=design.design.title, digest=mark, judge=shortfalls)
+    program = chosen(listed)
     shipped, proofs, budget = judged(program)
-    return Assessment(
-        design,
-        model,
-        sampled,
+    found = FixedPoint(
         program,
-        mark,
-        response_errors(sampled, design.budget.band_hz),
-        shipped,
         quantised_dc_gain(program),
         choice_report(program, sampled) if program.structure in ("direct", "transposed") else None,
-        tried,
+        listed if design.arithmetic.structure == "auto" else (),
         proofs,
-        budget,
+        next(one.relaxation for one in listed if one.program is program),
+        settled_offsets(program, sampled, proofs.rounding, step_codes(program, proofs.peak_code))
+        if proofs.rounding is not None
+        else (),
     )
+    return found, shipped, budget
+
+
+def _single_precision(
+    design: Design, sampled: Sampled, mark: str
+) -> tuple[SinglePrecision, ResponseErrors, Sequence[BudgetLine]]:
+    from afterkick.floating import float_estimates, float_program, realised_float  # fixed point pays nothing for it
+
+    program = float_program(
+        sampled,
+        design.signals,
+        design.design.name,
+        title=design.design.title,
+        digest=mark,
+        flush_below=design.arithmetic.flush_below,
+    )
+    shipped = response_errors(realised_float(program, sampled), design.budget.band_hz)
+    found = SinglePrecision(program, float_estimates(program, sampled))
+    return found, shipped, _budget_lines(design, sampled.model, shipped, {})
 
 
 def _held(model: Model, sampled: Sampled) -> Sampled | None:
@@ -121,8 +169,10 @@ def _held(model: Model, sampled: Sampled) -> Sampled | None:
     return sample(model, Sampling(rate_hz=sampled.rate_hz, method="zero-order-hold"))
 
 
-def _budget_lines(design: Design, model: Model, shipped: ResponseErrors, proofs: Bounds) -> list[BudgetLine]:
-    """The lines that the file gives, in the order of DESIGN's table; the shipped integers are judged."""
+def _budget_lines(
+    design: Design, model: Model, shipped: ResponseErrors, counts: dict[str, tuple[float | None, str]]
+) -> list[BudgetLine]:
+    """The lines that the file gives; what ships is judged, and ``counts`` are the figures in output counts."""
     band = shipped.band
     found: dict[str, tuple[float | None, str]] = {
         **_impulse_figures(shipped),
@@ -130,7 +180,7 @@ def _budget_lines(design: Design, model: Model, shipped: ResponseErrors, proofs:
         "phase_deg": _largest(band.phase_deg, band.phase_at_hz),
         "dc_gain_ppm": _dc_gain_ppm(model, shipped),
     }
-    found |= _proved_figures(proofs) | {"instructions": (None, "not supported yet")}
+    found |= counts | {"instructions": (None, "not supported yet")}
     limits = {item: getattr(design.budget, item) for item in found}
     return [
         BudgetLine(item, float(fraction(limit)), *found[item]) for item, limit in limits.items() if limit is not None
@@ -142,11 +192,12 @@ def _proved_figures(proofs: Bounds) -> dict[str, tuple[float | None, str]]:
     if proofs.output is None:
         nothing = (None, f"no bound: {proofs.why_not}")
         return {"worst_case_counts": nothing, "noise_counts": noise, "dead_band_counts": nothing}
-    return {
-        "worst_case_counts": (proofs.output.total, "bound, staircase inputs"),
-        "noise_counts": noise,
-        "dead_band_counts": (proofs.dead_band, "bound"),
-    }
+    while_linear = ", while no clamp acts" if proofs.clamped else ""
+    worst: tuple[float | None, str] = (proofs.output.total, f"bound, staircase inputs{while_linear}")
+    if proofs.output.growth:
+        worst = (None, f"no bound: it grows by up to {proofs.output.growth:.3g} counts a sample")
+    about = "" if proofs.integration is None else ", about the value that is held"
+    return {"worst_case_counts": worst, "noise_counts": noise, "dead_band_counts": (proofs.dead_band, f"bound{about}")}
 
 
 def _impulse_figures(shipped: ResponseErrors) -> dict[str, tuple[float | None, str]]:

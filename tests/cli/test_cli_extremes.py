@@ -76,6 +76,11 @@ def test_one_screen_or_a_clear_refusal(name, method, tmp_path):
     shown_or_refused(design_text(MODELS[name], method), tmp_path)
 
 
+@pytest.mark.parametrize("name", MODELS)
+def test_one_screen_or_a_clear_refusal_in_single_precision(name, tmp_path):
+    shown_or_refused(design_text(MODELS[name], "bilinear", more='[arithmetic]\nkind = "float32"'), tmp_path)
+
+
 @pytest.mark.parametrize("rate_hz", ["1e-300", "1e-3", "1e9", "1e300"])
 @pytest.mark.parametrize("method", METHODS)
 def test_extreme_rates(rate_hz, method, tmp_path):

@@ -27,7 +27,8 @@ def test_tour_walks_all_starters():
     assert result.exit_code == 0
     assert result.stdout.count("4096 samples equal integer for integer") == len(STARTERS)
     assert "verify it on the real hardware" in result.stdout
-    assert [line.split()[0] for line in result.stderr.splitlines()] == ["[1/5]", "[2/5]", "[3/5]", "[4/5]", "[5/5]"]
+    count = len(STARTERS)
+    assert [line.split()[0] for line in result.stderr.splitlines()] == [f"[{k}/{count}]" for k in range(1, count + 1)]
     assert all(len(line) <= 120 for line in result.stdout.splitlines())
 
 

@@ -126,7 +126,7 @@ def walk(text: str) -> str:
         found = assess(design)
         shown = check_text(found)
         json.dumps(check_data(found), allow_nan=False)
-        files = emit_c(found.program, notes=emitted_notes(found))
+        files = emit_c(found.realisation.program, notes=emitted_notes(found))
     except Refused as refusal:
         _require_clear(refusal)
         return "refused"

@@ -309,12 +309,20 @@ WRONG: dict[str, tuple[str, str, list[str]]] = {
     "overflow unknown": (with_arithmetic('overflow = "saturated"'), "arithmetic.overflow", ['did you mean "saturate"']),
     "scaling unknown": (with_arithmetic('scaling = "two norm"'), "arithmetic.scaling", ['did you mean "two-norm"']),
     "structure unknown": (with_arithmetic('structure = "directly"'), "arithmetic.structure", ['did you mean "direct"']),
-    "float32 later": (with_arithmetic('kind = "float32"'), "arithmetic.kind", ["float32", "not supported yet"]),
     "kind of arithmetic unknown": (with_arithmetic('kind = "float64"'), "arithmetic.kind", ['"fixed" or "float32"']),
     "state bits not used": (with_arithmetic("state_bits = 32"), "arithmetic.state_bits", ['"direct"', '"transposed"']),
     "state bits below data bits": (with_arithmetic("state_bits = 8"), "arithmetic.state_bits", ["at least data_bits"]),
-    "clamp later": (with_arithmetic("clamp = [-1, 1]"), "arithmetic.clamp", ["not supported yet"]),
-    "clamp exchanged": (with_arithmetic("clamp = [1, -1]"), "arithmetic.clamp", ["low less than high"]),
+    "clamp in a cascade": (with_arithmetic("clamp = [-1, 1]"), "arithmetic.clamp", ['"direct"', '"parallel"']),
+    "clamp exchanged": (
+        with_arithmetic('structure = "auto"\nclamp = [1, -1]'),
+        "arithmetic.clamp",
+        ["low less than high"],
+    ),
+    "clamp beyond full scale": (
+        with_arithmetic('structure = "auto"\nclamp = [-1, 17]'),
+        "arithmetic.clamp",
+        ["[-1, 17]", "full_scale, 16"],
+    ),
     # [target], [budget]
     "target in another folder": (changed('"host"', '"../host"'), "target.name", ["profile name", "afterkick targets"]),
     "budget below 0": (with_budget("noise_counts = -1"), "budget.noise_counts", ["at least 0"]),

@@ -60,14 +60,18 @@ MODELS = {
     "gain 10/3": blocks(Lowpass("butterworth", 2, fmpq(1)), Gain(fmpq(10, 3))),
     "two lags": blocks(Lag(corner_hz=fmpq(1)), Lag(corner_hz=fmpq(3))),
     "equal lags": blocks(Lag(corner_hz=fmpq(1)), Lag(corner_hz=fmpq(1))),
+    "three equal lags": blocks(*[Lag(corner_hz=fmpq(1))] * 3),
     "integrator": blocks(Integrator()),
     "integrator, lag": blocks(Integrator(), Lag(corner_hz=fmpq(1))),
     "pi": blocks(Pid(fmpq(2), fmpq(3))),
 }
 STABLE = tuple(name for name in MODELS if not name.startswith(("integrator", "pi")))
-# A repeated pole has no sum of parts: see test_refusals_name_section_and_remedy.
+# A pole repeated more than once has no sum of parts: see test_refusals_name_section_and_remedy.
 CASES = tuple(
-    (structure, model) for structure in NEW for model in MODELS if (structure, model) != ("parallel", "equal lags")
+    (structure, model)
+    for structure in NEW
+    for model in MODELS
+    if (structure, model) != ("parallel", "three equal lags")
 )
 STABLE_CASES = tuple((structure, model) for structure, model in CASES if model in STABLE)
 

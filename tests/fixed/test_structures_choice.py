@@ -1,6 +1,7 @@
 """The choice of a structure: costs by hand, the order of the candidates, and what is said of the others."""
 
 import pytest
+from flint import fmpq
 
 from afterkick.design.schema import Arithmetic
 from afterkick.errors import Refused
@@ -78,7 +79,25 @@ def test_refused_structures_are_listed_with_their_reason():
 
 def test_every_structure_refused():
     with pytest.raises(Refused, match='structure "delta"'):
-        build_program(at("low-pass 2", 20), Arithmetic(structure="auto", clamp=(-1, 1)), ROOMY, "probe")
+        build_program(
+            at("low-pass 2", 20), Arithmetic(structure="auto", data_bits=32, accumulator_bits=32), ROOMY, "probe"
+        )
+
+
+def test_what_integrates_is_kept_apart():
+    """The parallel structure comes first, though the direct one is cheaper."""
+    listed = candidates(at("integrator, lag", 100), AUTO, ROOMY, "probe")
+    assert chosen(listed).structure == "parallel"
+    costs = {one.structure: one.operations for one in listed}
+    assert costs["direct"] < costs["parallel"]
+
+
+def test_clamp_is_for_the_parallel_structure():
+    listed = candidates(at("low-pass 2", 20), Arithmetic(structure="auto", clamp=(fmpq(-1), fmpq(1))), ROOMY, "probe")
+    assert chosen(listed).structure == "parallel"
+    refused = [one for one in listed if one.program is None]
+    assert {one.structure for one in refused} == set(BUILD) - {"parallel"}
+    assert all("arithmetic.clamp" in str(problem) for one in refused for problem in one.refused)
 
 
 @pytest.mark.parametrize("structure", BUILD)

@@ -247,7 +247,7 @@ def test_states_that_are_too_narrow_are_refused():
 @pytest.mark.parametrize(
     ("structure", "model", "rate", "words"),
     [
-        ("parallel", "equal lags", 20, ("repeated pole", 'structure = "delta"')),
+        ("parallel", "three equal lags", 20, ("repeated pole", 'structure = "delta"')),
         ("coupled", "low-pass 2", 20_000, ("section 1", "significant bits", "delta structure")),
         ("transposed", "low-pass 2", 20_000, ("section 1", "unit circle", "remedy")),
     ],

@@ -8,6 +8,7 @@ import functools
 import os
 import re
 import shutil
+import sys
 from pathlib import Path
 
 import numpy as np
@@ -15,8 +16,9 @@ import pytest
 from flint import fmpq
 
 import afterkick
+from afterkick.bench import compare_on_host, compile_on_host, run_on_host
 from afterkick.design.schema import Signal, Signals
-from afterkick.emit.float_c import emit_float_c
+from afterkick.emit import emit_c
 from afterkick.errors import Refused
 from afterkick.floating import FloatProgram, float_program, simulate_float
 from emit.test_c_against_simulator import WARNINGS, ZIG, call
@@ -132,7 +134,7 @@ def compare(compiler: str, seeds: list[int], folder: Path) -> None:
     inputs = [inputs_of(program, seed) for seed, program in enumerate(programs)]
     parts = [DRIVER_HEAD]
     for program, samples in zip(programs, inputs, strict=True):
-        for name, text in emit_float_c(program).items():
+        for name, text in emit_c(program).items():
             (folder / name).write_text(text, encoding="ascii")
         parts.append(DRIVER_PART.format(name=program.name, length=samples.size, block=BLOCK))
     calls = "".join(f"    {program.name}_drive();\n" for program in programs)
@@ -159,6 +161,42 @@ def test_bit_for_bit(compiler, tmp_path):
     compare(compiler, SEEDS, tmp_path)
 
 
+@pytest.mark.parametrize("seed", range(8))
+def test_compare_on_host(seed):
+    program = random_filter(seed)[0]
+    assert compare_on_host(emit_c(program), program, 4096).equal
+
+
+@pytest.mark.parametrize(
+    ("old", "new"), [("-1.7f", "-1.7000002f"), ("state->s1_2 - a1_v1 + b1_x", "state->s1_2 + b1_x - a1_v1")]
+)
+def test_compare_on_host_tells_a_last_place(old, new):
+    plain = PlainSampled((([0.02, 0.03, 0.01], [-1.7, 0.745]), ([0.3, 0.2], [-0.5])))
+    program = float_program(plain, SIGNALS, "probe")
+    files = emit_c(program)
+    assert compare_on_host(files, program, 4096).equal
+    assert old in files["probe.c"]
+    files["probe.c"] = files["probe.c"].replace(old, new)
+    assert not compare_on_host(files, program, 4096).equal
+    # by the outputs alone, too
+    files["probe_selftest.c"] = '#include "probe_selftest.h"\nint32_t probe_selftest(void) { return -1; }\n'
+    assert not compare_on_host(files, program, 4096).equal
+
+
+def test_steps_on_the_host_are_those_of_a_run():
+    program = random_filter(1)[0]
+    samples = stimulus(1)
+    with compile_on_host(emit_c(program), program) as compiled:
+        compiled.reset()
+        stepped = np.array([compiled.step(float(sample)) for sample in samples], np.float32)
+        compiled.reset()
+        assert (stepped.view(np.uint32) == compiled.run(samples).view(np.uint32)).all()
+    inputs = np.stack([samples, samples[::-1]], axis=1)
+    found = run_on_host(emit_c(program), program, inputs)
+    assert (found.outputs.view(np.uint32) == simulate_float(program, inputs).view(np.uint32)).all()
+    assert found.selftest == -1
+
+
 def selftest_verdict(files: dict[str, str], name: str, folder: Path, command: list[str]) -> int:
     for file, text in files.items():
         (folder / file).write_text(text, encoding="ascii")
@@ -171,7 +209,7 @@ def selftest_verdict(files: dict[str, str], name: str, folder: Path, command: li
 
 def plain_files() -> dict[str, str]:
     plain = PlainSampled((([0.02, 0.03, 0.01], [-1.7, 0.745]), ([0.3, 0.2], [-0.5])))
-    return emit_float_c(float_program(plain, SIGNALS, "probe"))
+    return emit_c(float_program(plain, SIGNALS, "probe"))
 
 
 def test_self_test_tells_equal_near_and_wrong(tmp_path):
@@ -208,6 +246,13 @@ def test_fused_products_are_near_and_statements_keep_most_compilers_from_them(tm
     assert selftest_verdict(files, "probe", tmp_path, [*clang, "-ffp-contract=fast"]) == -2
 
 
+@pytest.mark.skipif(not has_fused_products(), reason="this processor has no fused multiply-add")
+def test_compare_on_host_fuses_nothing(monkeypatch):
+    monkeypatch.setenv("CC", f"{sys.executable} -m ziglang cc -mfma -ffp-contract=fast")
+    program = random_filter(1)[0]
+    assert compare_on_host(emit_c(program), program, 1024).equal
+
+
 @pytest.mark.parametrize("language", [["cc", "-std=c99"], ["c++", "-std=c++17", "-x", "c++"]], ids=["C99", "C++17"])
 def test_each_header_stands_on_its_own(language, tmp_path):
     files = plain_files()
@@ -221,7 +266,7 @@ def test_each_header_stands_on_its_own(language, tmp_path):
 @pytest.mark.parametrize("seed", range(20))
 def test_what_must_not_appear(seed):
     program, _ = random_filter(seed)
-    for name, text in emit_float_c(program).items():
+    for name, text in emit_c(program).items():
         for pattern in FORBIDDEN:
             if "float" in pattern:
                 continue
@@ -241,8 +286,8 @@ def test_what_must_not_appear(seed):
 def test_text_of_a_design_stays_in_its_comment(text):
     signals = Signals(Signal(text.strip() or "g", fmpq(1)), Signal(text.strip(), fmpq(1)))
     plain = PlainSampled((([0.5], [-0.5]),))
-    ordinary = emit_float_c(float_program(plain, Signals(), "probe"))
-    hostile = emit_float_c(float_program(plain, signals, "probe", title=text), notes=(text,))
+    ordinary = emit_c(float_program(plain, Signals(), "probe"))
+    hostile = emit_c(float_program(plain, signals, "probe", title=text), notes=(text,))
     for name in ordinary:
         assert code_without_comments(hostile[name]).split() == code_without_comments(ordinary[name]).split()
 
@@ -251,19 +296,19 @@ def test_same_program_same_bytes_and_a_bad_name_is_refused():
     files = plain_files()
     assert plain_files() == files
     with pytest.raises(Refused, match=r"design\.name"):
-        emit_float_c(float_program(PlainSampled((([1], []),)), Signals(), "int"))
+        emit_c(float_program(PlainSampled((([1], []),)), Signals(), "int"))
 
 
 def test_what_overflows_is_refused():
     unstable = float_program(PlainSampled((([1], [-1.25]),)), Signals(), "probe")
     with pytest.raises(Refused, match="beyond the largest single"):
-        emit_float_c(unstable)
+        emit_c(unstable)
 
 
 def test_header_says_what_it_is():
     plain = PlainSampled((([0.001, 0.002, 0.001], [-1.9, 0.905]),), 3)
     program = float_program(plain, SIGNALS, "probe", title="Demo", digest="5f3a9c01", flush_below=fmpq(1, 10**30))
-    header = re.sub(r"[\s*]+", " ", emit_float_c(program, notes=("A figure.",))["probe.h"])
+    header = re.sub(r"[\s*]+", " ", emit_c(program, notes=("A figure.",))["probe.h"])
     for words in (
         VERSION,
         "design 5f3a9c01",
@@ -293,7 +338,7 @@ def test_golden_files():
     )
     files = {
         name: text.replace(VERSION, "afterkick VERSION")
-        for name, text in emit_float_c(program, notes=("A note.",)).items()
+        for name, text in emit_c(program, notes=("A note.",)).items()
         if "selftest" not in name
     }
     if os.environ.get(UPDATE):

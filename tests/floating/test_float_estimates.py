@@ -56,12 +56,24 @@ def test_coefficient_error_is_a_bound_that_is_attained(seed):
     assert total * (1 - 1e-9) <= bound <= total * (1 + 1e-6) + 1e-12
 
 
+@pytest.mark.parametrize("seed", range(12))
+def test_output_peak_is_a_bound_that_is_attained(seed):
+    """The sign pattern of the reversed pulse response, filtered by scipy in doubles."""
+    program, plain = random_filter(seed, closest=0.01)
+    sections = [[*section.b, *section.a] for section in program.sections]
+    response = sosfilt(sections, [1.0] + [0.0] * 4999)
+    reached = sosfilt(sections, 12 * np.sign(response[::-1]))[-1]
+    bound = float_estimates(program, as_sampled(plain)).output_peak
+    assert reached * (1 - 1e-9) <= bound <= reached * (1 + 1e-6)
+
+
 def test_where_no_bound_exists():
     """An integrator."""
     model = blocks(schema.Integrator(gain=fmpq(2)), schema.Lag(corner_hz=fmpq(5)))
     filtered = sampled(model, 1000, "bilinear")
     found = float_estimates(float_program(filtered, SIGNALS, "probe"), filtered)
     assert found.coefficient_error is None
+    assert found.output_peak is None
     assert found.noise is None
     assert found.dc_gain is None
     assert found.tail.after_impulse is None

@@ -43,7 +43,7 @@ def design(
 
 def run(found: Assessment, signal: Floats) -> Floats:
     """The integer filter on a signal in input units, in output units."""
-    program = found.program
+    program = found.realisation.program
     scale = 1 << (program.data_bits - 1)
     sizes = [float(int(f.full_scale.p)) / int(f.full_scale.q) for f in (program.input_format, program.output_format)]
     codes = np.clip(np.round(signal / sizes[0] * scale), -scale, scale - 1).astype(np.int64)
@@ -103,8 +103,8 @@ def test_ecg_filter_without_error_feedback_never_comes_back() -> None:
     signal = np.zeros(500 * 60)
     signal[:500] = 3.0
     assert abs(run(found, signal)[-1]) > 0.1
-    assert found.bounds.dead_band is not None
-    assert found.bounds.dead_band * 10 / 32768 >= abs(run(found, signal)[-1])
+    assert found.realisation.bounds.dead_band is not None
+    assert found.realisation.bounds.dead_band * 10 / 32768 >= abs(run(found, signal)[-1])
 
 
 J211_CFC60 = {30.0: -0.029, 60.0: -0.454, 100.0: -3.008, 120.0: -5.385, 180.0: -14.58}
@@ -119,7 +119,7 @@ def test_j211_class_60_levels_bit_true(bits: int) -> None:
     found = design(block, 10000, sampling, f"data_bits = {bits}\ncoefficient_bits = {bits}\ncarry = 2", 1, 1.25)
     for frequency, expected in J211_CFC60.items():
         assert 2 * level_db(found, frequency, 0.9, 0.4) == pytest.approx(expected, abs=0.02 if bits == 32 else 0.1)
-    assert found.dc_gain == 1
+    assert found.realisation.dc_gain == 1
 
 
 @pytest.mark.parametrize(("bits", "margin"), [(16, 0.02), (32, 0.001)])

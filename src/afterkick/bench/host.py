@@ -14,19 +14,23 @@ from collections.abc import Iterator
 from contextlib import contextmanager
 from pathlib import Path
 from tempfile import TemporaryDirectory
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 from attrs import frozen
-from numpy.typing import NDArray
+from numpy.typing import ArrayLike, NDArray
 
 from afterkick.emit.literals import container_bits
 from afterkick.errors import Lacking, Problem, Refused
 from afterkick.fixed.program import Program, Role
 
+if TYPE_CHECKING:
+    from afterkick.floating import FloatProgram
+
 __all__ = ["CompiledFilter", "HostRun", "compile_on_host", "find_compiler", "run_on_host"]
 
-FLAGS = ("-std=c99", "-O2", "-shared", "-fPIC", "-nostdlib")
+# Contracted, a product and a sum of singles round once instead of twice.
+FLAGS = ("-std=c99", "-O2", "-ffp-contract=off", "-shared", "-fPIC", "-nostdlib")
 ZIG_FLAGS = ("-fno-sanitize=all",)
 TIME_LIMIT_S = 120
 LARGEST_STATE_WORD = 8
@@ -37,10 +41,10 @@ LARGEST_STATE_WORD = 8
 class HostRun:
     """What the compiled code did."""
 
-    outputs: NDArray[np.int64]
-    """Output codes, of the shape of the inputs."""
+    outputs: NDArray[Any]
+    """Output codes as 64-bit integers, or singles, of the shape of the inputs."""
     selftest: int
-    """What NAME_selftest returned: -1 where it holds, else the first sample that differs."""
+    """What NAME_selftest returned: -1 where it holds."""
     compiler: str
 
 
@@ -64,20 +68,19 @@ def find_compiler() -> tuple[str, ...]:
 
 
 class CompiledFilter:
-    """The functions of one design in a loaded library."""
+    """The functions of one design in a loaded library; its samples are codes or singles."""
 
-    def __init__(self, library: ctypes.CDLL, program: Program, compiler: str) -> None:
+    def __init__(self, library: ctypes.CDLL, program: "Program | FloatProgram", compiler: str) -> None:
         self.compiler = compiler
-        bits = container_bits(program.word(program.input).bits)
-        self._code: Any = {8: ctypes.c_int8, 16: ctypes.c_int16, 32: ctypes.c_int32}[bits]
-        self._array_type = np.dtype(f"int{bits}")
+        self._array_type, self._answer_type = _sample_types(program)
+        sample: Any = np.ctypeslib.as_ctypes_type(self._array_type)
         words = sum(word.role is Role.STATE for word in program.words)
         self._state = ctypes.create_string_buffer(LARGEST_STATE_WORD * (words + 1))
         self._reset, self._step, self._run, self._selftest = (
             getattr(library, f"{program.name}_{what}") for what in ("reset", "step", "run", "selftest")
         )
         self._reset.argtypes, self._reset.restype = [ctypes.c_void_p], None
-        self._step.argtypes, self._step.restype = [ctypes.c_void_p, self._code], self._code
+        self._step.argtypes, self._step.restype = [ctypes.c_void_p, sample], sample
         self._run.argtypes, self._run.restype = [ctypes.c_void_p] * 3 + [ctypes.c_uint32], None
         self._selftest.argtypes, self._selftest.restype = [], ctypes.c_int32
 
@@ -85,23 +88,31 @@ class CompiledFilter:
         """NAME_reset."""
         self._reset(self._state)
 
-    def step(self, code: int) -> int:
+    def step(self, sample: float) -> int | float:
         """NAME_step."""
-        return int(self._step(self._state, code))
+        answer: int | float = self._step(self._state, sample)
+        return answer
 
-    def run(self, codes: NDArray[np.integer[Any]]) -> NDArray[np.int64]:
+    def run(self, samples: NDArray[Any]) -> NDArray[Any]:
         """NAME_run over an array of shape (n,), in place in a copy."""
-        block = np.array(codes, dtype=self._array_type, order="C")
+        block = np.array(samples, dtype=self._array_type, order="C")
         self._run(self._state, block.ctypes.data, block.ctypes.data, block.size)
-        return block.astype(np.int64)
+        return block.astype(self._answer_type)
 
     def selftest(self) -> int:
         """NAME_selftest."""
         return int(self._selftest())
 
 
+def _sample_types(program: "Program | FloatProgram") -> tuple[np.dtype[Any], np.dtype[Any]]:
+    """Of the compiled functions, and of the arrays that they are compared in."""
+    if isinstance(program, Program):
+        return np.dtype(f"int{container_bits(program.word(program.input).bits)}"), np.dtype(np.int64)
+    return np.dtype(np.float32), np.dtype(np.float32)
+
+
 @contextmanager
-def compile_on_host(files: dict[str, str], program: Program) -> Iterator[CompiledFilter]:
+def compile_on_host(files: dict[str, str], program: "Program | FloatProgram") -> Iterator[CompiledFilter]:
     """The emitted files as a loaded library; nothing stays on the disk.
 
     :raises Lacking: without a compiler.
@@ -126,17 +137,17 @@ def compile_on_host(files: dict[str, str], program: Program) -> Iterator[Compile
         yield CompiledFilter(ctypes.CDLL(str(library)), program, " ".join(["ziglang cc"] if zig else command))
 
 
-def run_on_host(files: dict[str, str], program: Program, inputs: NDArray[np.integer[Any]]) -> HostRun:
-    """Compile, run the self-test, and filter input codes of shape (n,) or (n, m), each column from a reset state.
+def run_on_host(files: dict[str, str], program: "Program | FloatProgram", inputs: ArrayLike) -> HostRun:
+    """Compile, run the self-test, and filter inputs of shape (n,) or (n, m), each column from a reset state.
 
     :raises Lacking: without a compiler.
     """
-    codes = np.asarray(inputs)
-    columns = codes[:, None] if codes.ndim == 1 else codes
-    outputs = np.empty(columns.shape, dtype=np.int64)
+    samples = np.asarray(inputs)
+    columns = samples[:, None] if samples.ndim == 1 else samples
+    outputs = np.empty(columns.shape, dtype=_sample_types(program)[1])
     with compile_on_host(files, program) as compiled:
         verdict = compiled.selftest()
         for i in range(columns.shape[1]):
             compiled.reset()
             outputs[:, i] = compiled.run(columns[:, i])
-        return HostRun(outputs.reshape(codes.shape), verdict, compiled.compiler)
+        return HostRun(outputs.reshape(samples.shape), verdict, compiled.compiler)

@@ -16,7 +16,7 @@ __all__ = ["main"]
 _COMMANDS = {
     "new": "Write a commented starter design.",
     "check": "Run the whole road on designs and judge their budgets.",
-    "kick": "The impulse response as numbers: analytic, sampled, integer.",
+    "kick": "The impulse response as numbers: analytic, sampled, shipped.",
     "emit": "Write the C.",
     "targets": "List the target profiles.",
     "tour": "The whole road on the demo designs, for a first look.",

@@ -22,7 +22,7 @@ def command(design: Path, folder: Path, templates: Path | None, targets: Path | 
     """Writes whatever the verdict: judging is what ``check`` is for.  The verdict is said, though."""
     with reported(str(design)) as codes:
         found = assess(load(design, targets))
-        files = emit_c(found.program, notes=emitted_notes(found), templates=templates)
+        files = emit_c(found.realisation.program, notes=emitted_notes(found), templates=templates)
         write_all(folder, files)
         codes.append(HOLDS)
         if as_json:

@@ -4,15 +4,13 @@ from time import monotonic
 from typing import Any
 
 import click
-import numpy as np
+from attrs import asdict
 
-from afterkick.bench.host import run_on_host
+from afterkick.bench import compare_on_host
 from afterkick.cli.common import FALLS_SHORT, HOLDS, json_option, print_json, reported
 from afterkick.design import read_design
 from afterkick.emit import emit_c
 from afterkick.errors import Lacking
-from afterkick.fixed.program import Program
-from afterkick.fixed.simulate import simulate
 from afterkick.report.notes import emitted_notes
 from afterkick.report.text import tour_text
 from afterkick.starters import STARTERS, starter_text
@@ -54,7 +52,7 @@ def command(as_json: bool) -> None:
 def _stop(starter: str, shows: str) -> tuple[dict[str, Any], str]:
     start = monotonic()
     found = assess(read_design(starter_text(starter)))
-    files = emit_c(found.program, notes=emitted_notes(found))
+    files = emit_c(found.realisation.program, notes=emitted_notes(found))
     stop: dict[str, Any] = {
         "design": starter,
         "shows": shows,
@@ -66,18 +64,7 @@ def _stop(starter: str, shows: str) -> tuple[dict[str, Any], str]:
         "lacking": None,
     }
     try:
-        stop |= _compared(found.program, files)
+        stop |= asdict(compare_on_host(files, found.realisation.program, _SAMPLES))
     except Lacking as error:
         stop["lacking"] = str(error)
     return stop, tour_text(found, stop, monotonic() - start)
-
-
-def _compared(program: Program, files: dict[str, str]) -> dict[str, Any]:
-    """A full-scale kick, a full-scale step and noise, through the compiled C and the simulator."""
-    word = program.word(program.input)
-    codes = np.random.default_rng(1).integers(word.lowest, word.highest, size=_SAMPLES, endpoint=True)
-    codes[: _SAMPLES // 4] = 0
-    codes[0], codes[_SAMPLES // 8 : _SAMPLES // 4] = word.highest, word.lowest
-    run = run_on_host(files, program, codes)
-    equal = bool(np.array_equal(run.outputs, simulate(program, codes))) and run.selftest == -1
-    return {"equal": equal, "compiler": run.compiler}

@@ -10,6 +10,9 @@ from collections.abc import Set as AbstractSet
 from types import SimpleNamespace
 from typing import Any, TypeAlias
 
+import attrs
+from flint import fmpq
+
 from afterkick.design.limits import HIGHEST_ORDER, describe, plain
 from afterkick.design.schema import (
     Arithmetic,
@@ -45,6 +48,9 @@ OPTION_METHODS = {
     "first_sample": ("impulse-invariant",),
     "zeros_at_infinity": ("matched",),
 }
+SINGLE_KEYS = ("kind", "structure", "flush_below")
+"""The keys of [arithmetic] that single precision uses."""
+COUNT_LIMITS = ("worst_case_counts", "noise_counts", "dead_band_counts")
 
 
 def _design(table: SimpleNamespace, given: AbstractSet[str]) -> Iterator[Problem]:
@@ -57,6 +63,22 @@ def _design(table: SimpleNamespace, given: AbstractSet[str]) -> Iterator[Problem
             f"less than half the sampling rate, {plain(rate / 2)}",
             "a narrower band or a higher rate",
         )
+    single = getattr(table.arithmetic, "kind", None) == "float32"
+    clamp = getattr(table.arithmetic, "clamp", None)
+    reach = getattr(getattr(table.signals, "output", None), "full_scale", None)
+    if not single and clamp is not None and reach is not None and max(abs(end) for end in clamp) > reach:
+        remedy = "limits that the output can reach, or a larger output full_scale"
+        yield Problem("arithmetic.clamp", _pair(clamp), f"within the output's full_scale, {plain(reach)}", remedy)
+    source = getattr(table.signals, "input", None)
+    peak, full_scale = getattr(source, "peak", None), getattr(source, "full_scale", None)
+    if not single and peak is not None and full_scale is not None and peak > full_scale:
+        remedy = "raise full_scale, as larger values can't be represented"
+        yield Problem("signals.input.peak", plain(peak), f"at most full_scale, {plain(full_scale)}", remedy)
+    for key in COUNT_LIMITS if single else ():
+        if getattr(table.budget, key, None) is not None:
+            found = 'a limit in output counts, which the kind "float32" does not have'
+            remedy = f"remove {key}: check shows noise and bounds in output units"
+            yield Problem(f"budget.{key}", found, 'only with arithmetic.kind = "fixed"', remedy)
 
 
 def _ode(table: SimpleNamespace, given: AbstractSet[str]) -> Iterator[Problem]:
@@ -162,24 +184,26 @@ def _sampling(table: SimpleNamespace, given: AbstractSet[str]) -> Iterator[Probl
 
 
 def _signals(table: SimpleNamespace, given: AbstractSet[str]) -> Iterator[Problem]:
-    peak, full_scale = getattr(table.input, "peak", None), getattr(table.input, "full_scale", None)
-    if peak is not None and full_scale is not None and peak > full_scale:
-        remedy = "raise full_scale, as larger values can't be represented"
-        yield Problem("input.peak", plain(peak), f"at most full_scale, {plain(full_scale)}", remedy)
     if getattr(table.output, "peak", None) is not None:
         yield Problem("output.peak", "a peak", "a peak of the input only", "remove peak: the output's is computed")
 
 
 def _arithmetic(table: SimpleNamespace, given: AbstractSet[str]) -> Iterator[Problem]:
     if table.kind == "float32":
-        yield _later("kind", table.kind, '"fixed"', 'write kind = "fixed"')
+        yield from _single_precision(table, given)
+        return
+    if table.kind is not None and table.flush_below is not None:
+        yield _of_the_other_kind("flush_below", table.kind, "float32")
     if table.clamp is not None:
         low, high = table.clamp
-        if low < high:
-            yield _later("clamp", [low, high], "a file without clamp", "remove clamp")
-        else:
+        if low >= high:
+            yield Problem("clamp", _pair(table.clamp), "[low, high] with low less than high", "exchange the two")
+        if table.structure not in ("parallel", "auto", None):
             yield Problem(
-                "clamp", f"[{plain(low)}, {plain(high)}]", "[low, high] with low less than high", "exchange the two"
+                "clamp",
+                f'a key that the structure "{table.structure}" does not use',
+                'only with "parallel", which keeps apart what integrates, or "auto"',
+                'write structure = "parallel"',
             )
     if table.state_bits is not None:
         if table.data_bits is not None and table.state_bits < table.data_bits:
@@ -195,8 +219,20 @@ def _arithmetic(table: SimpleNamespace, given: AbstractSet[str]) -> Iterator[Pro
             )
 
 
-def _later(key: str, value: object, accepted: str, remedy: str) -> Problem:
-    return Problem(key, f"{describe(value)}, not supported yet", f"in this version only {accepted}", remedy)
+def _single_precision(table: SimpleNamespace, given: AbstractSet[str]) -> Iterator[Problem]:
+    for key in (field.name for field in attrs.fields(Arithmetic)):
+        if key in given and getattr(table, key) is not None and key not in SINGLE_KEYS:
+            yield _of_the_other_kind(key, table.kind, "fixed")
+    if "structure" in given and table.structure not in (None, "transposed"):
+        yield Problem("structure", describe(table.structure), '"transposed" with kind = "float32"', "remove structure")
+
+
+def _of_the_other_kind(key: str, kind: str, user: str) -> Problem:
+    return Problem(key, f'a key that the kind "{kind}" does not use', f'only with kind = "{user}"', f"remove {key}")
+
+
+def _pair(ends: tuple[fmpq, fmpq]) -> str:
+    return f"[{plain(ends[0])}, {plain(ends[1])}]"
 
 
 def _budget(table: SimpleNamespace, given: AbstractSet[str]) -> Iterator[Problem]:

@@ -385,6 +385,10 @@ class Arithmetic:
     accumulator_bits: Annotated[int, Choice((32, 64))] | None = None
     scaling: Annotated[str, Choice(SCALINGS)] = "peak-gain"
     clamp: Annotated[tuple[fmpq, fmpq], Items(2, 2, "numbers, [low, high]")] | None = None
+    flush_below: Positive | None = None
+    """Single precision only: states below it are set to zero, in output units of their section."""
+    relax: bool = False
+    """Whether what the bounds prove idle is left out; the code then relies on the input's peak."""
 
     def __attrs_post_init__(self) -> None:
         if self.carry is True:

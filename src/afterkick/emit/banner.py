@@ -1,18 +1,27 @@
 """The comments at the top of the emitted files: what they realise, and how far to trust it."""
 
-from collections.abc import Iterator
+from collections.abc import Iterator, Sequence
 from typing import Protocol
 
 from flint import fmpq
 
 from afterkick import __version__
 from afterkick.emit.literals import decimal
+from afterkick.emit.promise import accepted_codes, promise
 from afterkick.emit.text import comment_lines
-from afterkick.fixed.program import Overflow, Program, ProgramSection, Rounding, Sum, quantised_dc_gain
+from afterkick.fixed.program import (
+    Overflow,
+    Program,
+    ProgramSection,
+    Rounding,
+    SignalFormat,
+    Sum,
+    quantised_dc_gain,
+)
 
 __all__ = [
     "CAUTIONS",
-    "Titled",
+    "filter_lines",
     "first_lines",
     "header_banner",
     "listed",
@@ -36,8 +45,8 @@ CAUTIONS = (
 )
 
 
-class Titled(Protocol):
-    """What the first lines of a file say of a program of any arithmetic."""
+class Described(Protocol):
+    """What the comments say of a program of any arithmetic."""
 
     @property
     def name(self) -> str: ...
@@ -48,11 +57,27 @@ class Titled(Protocol):
     @property
     def digest(self) -> str: ...
 
+    @property
+    def method(self) -> str: ...
+
+    @property
+    def rate_hz(self) -> fmpq: ...
+
+    @property
+    def delay_samples(self) -> int: ...
+
+    @property
+    def input_format(self) -> SignalFormat: ...
+
+    @property
+    def output_format(self) -> SignalFormat: ...
+
 
 def header_banner(program: Program, notes: tuple[str, ...]) -> tuple[str, ...]:
     """Lines for NAME.h: the whole story."""
     return (
         *first_lines(program, ".h", program.title),
+        *promise(program),
         *_filter(program),
         *_signals(program),
         *_options(program),
@@ -61,17 +86,17 @@ def header_banner(program: Program, notes: tuple[str, ...]) -> tuple[str, ...]:
     )
 
 
-def source_banner(program: Titled) -> tuple[str, ...]:
+def source_banner(program: Described) -> tuple[str, ...]:
     """Lines for NAME.c."""
     return first_lines(program, ".c", program.title)
 
 
-def selftest_banner(program: Titled, ending: str) -> tuple[str, ...]:
+def selftest_banner(program: Described, ending: str) -> tuple[str, ...]:
     """Lines for the files of the self-test."""
     return first_lines(program, f"_selftest{ending}", f"self-test of {program.title}")
 
 
-def first_lines(program: Titled, ending: str, title: str) -> tuple[str, ...]:
+def first_lines(program: Described, ending: str, title: str) -> tuple[str, ...]:
     """Which file this is, where it comes from, whose it is."""
     origin = f", design {program.digest}" if program.digest else ""
     return (
@@ -90,24 +115,33 @@ def listed(heading: str, items: tuple[str, ...]) -> tuple[str, ...]:
     return ("", f"{heading}:", *lines) if lines else ()
 
 
-def _filter(program: Program) -> Iterator[str]:
-    count = len(program.sections)
+def filter_lines(
+    program: Described, structure: str, transfers: Sequence[str], gain: fmpq | None, stored: str
+) -> Iterator[str]:
+    """What the filter is; ``gain`` is the exact DC gain of what is ``stored``."""
+    count = len(transfers)
     sections = f"{count} section{'s' if count > 1 else ''}"
-    together = "in parallel" if program.structure == "parallel" else "in cascade"
     sampling = f"sampled by {program.method} at {decimal(program.rate_hz)} Hz"
     yield ""
-    yield from comment_lines(f"The filter: {sections} {together}, structure {program.structure}, {sampling}.")
-    for number, section in enumerate(program.sections, start=1):
-        yield from comment_lines(f"H{number}(z) = {_transfer(section)}", "  ")
-    gain = quantised_dc_gain(program)
+    yield from comment_lines(f"The filter: {sections} {structure}, {sampling}.")
+    for number, transfer in enumerate(transfers, start=1):
+        yield from comment_lines(f"H{number}(z) = {transfer}", "  ")
     text = "none, there is a pole at z = 1" if gain is None else f"{decimal(gain)}{_per(program)}"
-    yield from comment_lines(f"DC gain of these integers: {text}.")
+    yield from comment_lines(f"DC gain of these {stored}: {text}.")
     samples = program.delay_samples
     yield from comment_lines(f"Delay in front of the sections: {samples} sample{'' if samples == 1 else 's'}.")
+
+
+def _filter(program: Program) -> Iterator[str]:
+    together = "in parallel" if program.structure == "parallel" else "in cascade"
+    transfers = [_transfer(section) for section in program.sections]
+    structure = f"{together}, structure {program.structure}"
+    yield from filter_lines(program, structure, transfers, quantised_dc_gain(program), "integers")
     yield ""
     yield "Difference equations, in codes; v_1 is v one sample ago. Products and sums are exact."
     yield from comment_lines(f"Every division rounds {ROUNDING_TEXT[program.rounding]}.")
-    yield from comment_lines(f"A result beyond its word {OVERFLOW_TEXT[program.overflow]}.")
+    unproved = "" if program.proof is None else " that has no proved range below"
+    yield from comment_lines(f"A result beyond its word{unproved} {OVERFLOW_TEXT[program.overflow]}.")
     for step in program.steps:
         if isinstance(step, Sum):
             yield from comment_lines(_equation(step, program.word(step.dest).bits), "  ")
@@ -121,11 +155,11 @@ def _proof(program: Program) -> Iterator[str]:
     """The bounds that took the saturation away, each beside what its word holds."""
     if program.proof is None:
         return
-    lowest, highest = -program.proof.peak_code, min(program.proof.peak_code, program.word(program.input).highest)
+    codes = accepted_codes(program)
     yield ""
     yield from comment_lines(
-        f"Proved, from a reset on and for input codes from {lowest} to {highest}: these words stay within the limits "
-        "below, so nothing checks them."
+        f"Proved, from a reset on and for input codes from {codes.lowest} to {codes.highest}: these words stay within "
+        "the limits below, so nothing checks them."
     )
     for entry in program.proof.ranges:
         word = program.word(entry.word)
@@ -157,10 +191,11 @@ def _linear(terms: list[tuple[int, str]]) -> str:
 def _equation(step: Sum, bits: int) -> str:
     total = _linear([(term.factor, f" {term.word}") for term in step.terms])
     divisor = f" / 2^{step.right_shift}" if step.right_shift else ""
-    return f"{step.dest} = ({total}){divisor}   [{step.accumulator_bits}-bit sum, {bits}-bit word]"
+    held = "" if step.limits is None else f", held from {step.limits[0]} to {step.limits[1]}"
+    return f"{step.dest} = ({total}){divisor}   [{step.accumulator_bits}-bit sum, {bits}-bit word{held}]"
 
 
-def _per(program: Program) -> str:
+def _per(program: Described) -> str:
     top, bottom = program.output_format.unit, program.input_format.unit
     return f" {top or '1'} per {bottom or '1'}" if top != bottom else ""
 
@@ -188,5 +223,5 @@ def _options(program: Program) -> Iterator[str]:
         f"Options: data_bits = {program.data_bits}, coefficient_bits = {program.coefficient_bits}, "
         f"structure = {program.structure}, rounding = {program.rounding.value}, "
         f"overflow = {program.overflow.value}, scaling = {program.scaling}"
-        f"{f', carry = {program.carry}' if program.carry else ''}."
+        f"{f', carry = {program.carry}' if program.carry else ''}{', relax = true' if program.proof else ''}."
     )

@@ -1,4 +1,4 @@
-"""Program -> C files as text.  The templates place what the views decide."""
+"""Program or FloatProgram -> C files as text.  The templates place what the views decide."""
 
 from functools import lru_cache
 from pathlib import Path
@@ -14,7 +14,9 @@ from afterkick.resources import resource_folder
 if TYPE_CHECKING:
     from jinja2 import Environment
 
-__all__ = ["emit_c", "rendered"]
+    from afterkick.floating import FloatProgram
+
+__all__ = ["emit_c"]
 
 LANGUAGE = "c"
 FILES = {
@@ -25,29 +27,42 @@ FILES = {
 }
 
 
-def emit_c(program: Program, *, notes: tuple[str, ...] = (), templates: Path | None = None) -> dict[str, str]:
+def emit_c(
+    program: "Program | FloatProgram", *, notes: tuple[str, ...] = (), templates: Path | None = None
+) -> dict[str, str]:
     """NAME.h, NAME.c, NAME_selftest.h and NAME_selftest.c: the same program gives the same bytes.
 
     ``notes`` are lines for the header, for example measured errors.  Templates in ``templates``/c go before those that
     come with the package.
 
-    :raises Refused: for a program whose sums could overflow, a name that can't be a prefix of C symbols, or a template
-        that can't be used.
+    :raises Refused: for a program whose sums could overflow, or whose singles do within the promised peak, a name that
+        can't be a prefix of C symbols, or a template that can't be used.
     """
+    if isinstance(program, Program):
+        view = program_view(program, notes)
+        return _rendered("", view.symbols, templates, view=view, test=selftest_view(program, view.symbols))
+    from afterkick.emit.float_selftest import float_selftest_view  # fixed point pays nothing for them
+    from afterkick.emit.float_view import float_program_view
+
+    single = float_program_view(program, notes)
+    test = float_selftest_view(program, single.symbols)
+    return _rendered("float_", single.symbols, templates, view=single, test=test)
+
+
+def _rendered(prefix: str, symbols: Symbols, templates: Path | None, **context: object) -> dict[str, str]:
     folders = () if templates is None else (_own_folder(templates),)
     environment = _environment((*folders, resource_folder("templates") / LANGUAGE))
-    view = program_view(program, notes)
-    test = selftest_view(program, view.symbols)
-    files = {}
-    for ending, template in FILES.items():
+    texts = {}
+    for ending, name in FILES.items():
+        template = prefix + name
         try:
-            files[view.symbols.file(ending)] = environment.get_template(template).render(view=view, test=test)
+            texts[symbols.file(ending)] = environment.get_template(template).render(context)
         except Exception as error:  # a template is a program of the user's own: it can raise anything
             if templates is None:
                 raise
             where, found = f"template {LANGUAGE}/{template}", f"{type(error).__name__}: {error}"
             raise Refused(Problem(where, found, "a template that renders", "correct the template")) from error
-    return files
+    return texts
 
 
 @lru_cache(maxsize=4)
@@ -71,22 +86,3 @@ def _own_folder(templates: Path) -> Path:
         found = f"{templates} holds no folder {LANGUAGE}"
         raise Refused(Problem("templates", found, f"a folder with templates in {LANGUAGE}/", f"make {folder}"))
     return folder
-
-
-def rendered(files: dict[str, str], symbols: Symbols, templates: Path | None, **context: object) -> dict[str, str]:
-    """The templates that ``files`` gives for the endings of file names, as text.
-
-    :raises Refused: for a template that can't be used.
-    """
-    folders = () if templates is None else (_own_folder(templates),)
-    environment = _environment((*folders, resource_folder("templates") / LANGUAGE))
-    texts = {}
-    for ending, template in files.items():
-        try:
-            texts[symbols.file(ending)] = environment.get_template(template).render(context)
-        except Exception as error:  # a template is a program of the user's own: it can raise anything
-            if templates is None:
-                raise
-            where, found = f"template {LANGUAGE}/{template}", f"{type(error).__name__}: {error}"
-            raise Refused(Problem(where, found, "a template that renders", "correct the template")) from error
-    return texts

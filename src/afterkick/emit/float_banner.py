@@ -2,9 +2,8 @@
 
 from collections.abc import Iterator, Sequence
 
-from afterkick.emit.banner import CAUTIONS, first_lines, listed, quantity
+from afterkick.emit.banner import CAUTIONS, filter_lines, first_lines, listed, quantity
 from afterkick.emit.float_literals import single
-from afterkick.emit.literals import decimal
 from afterkick.emit.text import comment_lines
 from afterkick.floating.program import FloatProgram, FloatProgramSection, float_dc_gain
 
@@ -29,19 +28,9 @@ def float_header_banner(program: FloatProgram, notes: tuple[str, ...]) -> tuple[
 
 
 def _filter(program: FloatProgram) -> Iterator[str]:
-    count = len(program.sections)
-    yield ""
-    yield from comment_lines(
-        f"The filter: {count} section{'s' if count > 1 else ''} in cascade, single precision, transposed direct form "
-        f"II, sampled by {program.method} at {decimal(program.rate_hz)} Hz."
-    )
-    for number, section in enumerate(program.sections, start=1):
-        yield from comment_lines(f"H{number}(z) = {_transfer(section)}", "  ")
-    gain = float_dc_gain(program)
-    text = "none, there is a pole at z = 1" if gain is None else f"{decimal(gain)}{_per(program)}"
-    yield from comment_lines(f"DC gain of these coefficients: {text}.")
-    samples = program.delay_samples
-    yield from comment_lines(f"Delay in front of the sections: {samples} sample{'' if samples == 1 else 's'}.")
+    structure = "in cascade, single precision, transposed direct form II"
+    transfers = [_transfer(section) for section in program.sections]
+    return filter_lines(program, structure, transfers, float_dc_gain(program), "coefficients")
 
 
 def _transfer(section: FloatProgramSection) -> str:
@@ -56,11 +45,6 @@ def _polynomial(coefficients: Sequence[float]) -> str:
             sign = ("-" if value < 0 else "") if not text else (" - " if value < 0 else " + ")
             text += f"{sign}{single(abs(value)).removesuffix('f')}{power}"
     return text
-
-
-def _per(program: FloatProgram) -> str:
-    top, bottom = program.output_format.unit, program.input_format.unit
-    return f" {top or '1'} per {bottom or '1'}" if top != bottom else ""
 
 
 def _arithmetic(program: FloatProgram) -> Iterator[str]:

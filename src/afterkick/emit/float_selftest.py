@@ -8,7 +8,7 @@ from attrs import frozen
 
 from afterkick.emit.banner import selftest_banner
 from afterkick.emit.float_literals import single
-from afterkick.emit.selftest import BLOCK, INCREMENT, LONG_RUN, MULTIPLIER, PART, SEED, WORD
+from afterkick.emit.stimuli import BLOCK, LONG_RUN, PART, StimuliView, generated, loud_parts, rows
 from afterkick.emit.symbols import Symbols
 from afterkick.emit.text import harmless
 from afterkick.errors import Problem, Refused
@@ -24,26 +24,13 @@ ALLOWED = 8
 
 
 @frozen
-class FloatSelfTestView:
+class FloatSelfTestView(StimuliView):
     """What the self-test's templates place."""
 
-    symbols: Symbols
-    header_banner: tuple[str, ...]
-    source_banner: tuple[str, ...]
-    part: int
-    samples: int
-    input_rows: tuple[str, ...]
-    expected_rows: tuple[str, ...]
-    long_run: int
-    long_blocks: int
     long_rows: tuple[str, ...]
     """The last sample of each block of the long run."""
-    block: int
     last: int
     """The index of a block's last sample."""
-    seed: str
-    multiplier: str
-    increment: str
     noise_scale: str
     tolerance: str
     unit: str
@@ -57,7 +44,8 @@ def float_selftest_view(program: FloatProgram, symbols: Symbols) -> FloatSelfTes
     format_ = program.input_format
     peak = np.float32(int(format_.peak.numerator) / int(format_.peak.denominator))
     scale = peak / np.float32(1 << (NOISE_BITS - 1))
-    parts = _parts(peak, scale)
+    quiet = _noise(PART, scale / np.float32(8))
+    parts = [np.array(part) for part in (*loud_parts(-peak, np.float32(0), peak), quiet)]
     noise = _noise(LONG_RUN, scale)
     expected = np.concatenate([simulate_float(program, part) for part in parts])
     long_run = simulate_float(program, noise)
@@ -69,40 +57,21 @@ def float_selftest_view(program: FloatProgram, symbols: Symbols) -> FloatSelfTes
         symbols=symbols,
         header_banner=selftest_banner(program, ".h"),
         source_banner=selftest_banner(program, ".c"),
-        part=PART,
         samples=expected.size,
         input_rows=_rows(np.concatenate(parts)),
         expected_rows=_rows(expected),
-        long_run=LONG_RUN,
-        long_blocks=LONG_RUN // BLOCK,
         long_rows=_rows(long_run[BLOCK - 1 :: BLOCK]),
-        block=BLOCK,
         last=BLOCK - 1,
-        seed=f"UINT32_C({SEED})",
-        multiplier=f"UINT32_C({MULTIPLIER})",
-        increment=f"UINT32_C({INCREMENT})",
         noise_scale=single(float(scale)),
         tolerance=single(_tolerance(program, [*parts, noise])),
         unit=harmless(program.output_format.unit),
     )
 
 
-def _parts(peak: np.float32, scale: np.float32) -> list[np.ndarray]:
-    """Impulse, step, alternation at the peak in blocks that excite slow sections too, and noise of an eighth."""
-    n = np.arange(PART)
-    impulse = np.where(n == 0, peak, np.float32(0))
-    step = np.full(PART, -peak)
-    alternation = np.where((np.where(n < PART // 2, n & 1, n & 4)) == 0, peak, -peak)
-    return [impulse, step, alternation, _noise(PART, scale / np.float32(8))]
-
-
 def _noise(count: int, scale: np.float32) -> np.ndarray:
     """Singles within the peak from the highest 16 bits of the generator, one rounding each."""
-    codes, seed = [], SEED
-    for _ in range(count):
-        seed = (seed * MULTIPLIER + INCREMENT) % WORD
-        codes.append((seed >> (32 - NOISE_BITS)) - (1 << (NOISE_BITS - 1)))
-    return np.array(codes, dtype=np.float32) * scale
+    codes = np.array(generated(NOISE_BITS, count)) - (1 << (NOISE_BITS - 1))
+    return codes.astype(np.float32) * scale
 
 
 def _tolerance(program: FloatProgram, stimuli: list[np.ndarray]) -> float:
@@ -116,6 +85,4 @@ def _tolerance(program: FloatProgram, stimuli: list[np.ndarray]) -> float:
 
 
 def _rows(values: np.ndarray) -> tuple[str, ...]:
-    """Initialisers, a few a line."""
-    texts = [single(float(value)) for value in values]
-    return tuple(", ".join(texts[i : i + PER_LINE]) + "," for i in range(0, len(texts), PER_LINE))
+    return rows([single(float(value)) for value in values], PER_LINE)

@@ -1,14 +1,38 @@
 """What the C templates place: every type, literal, symbol and line of code, decided here."""
 
+from collections.abc import Iterable, Iterator
+
 from attrs import frozen
 
 from afterkick.emit.banner import header_banner, source_banner
 from afterkick.emit.literals import container_bits, integer, signed
+from afterkick.emit.promise import accepted_codes, others, promise
 from afterkick.emit.symbols import Symbols
-from afterkick.fixed.program import Coefficient, Overflow, Program, ProgramSection, Role, Rounding, Sum, Term, Word
-from afterkick.fixed.ranges import Interval, require_valid
+from afterkick.fixed.program import (
+    Coefficient,
+    Overflow,
+    Preset,
+    Program,
+    Role,
+    Rounding,
+    Step,
+    Sum,
+    Term,
+    Word,
+)
+from afterkick.fixed.ranges import Analysis, require_valid
 
-__all__ = ["BlockView", "CheckView", "HelperView", "LineView", "MemberView", "ProgramView", "container", "program_view"]
+__all__ = [
+    "BlockView",
+    "CheckView",
+    "HelperView",
+    "LineView",
+    "MemberView",
+    "PresetView",
+    "ProgramView",
+    "container",
+    "program_view",
+]
 
 ROUNDING_HELPER = {Rounding.NEAREST: "nearest", Rounding.FLOOR: "shift", Rounding.EVEN: "even"}
 HELPER_ORDER = ("shift", "nearest", "even", "clamp", "wrap")
@@ -37,6 +61,14 @@ class BlockView:
     """The statements of one section."""
 
     title: str
+    lines: tuple[LineView, ...]
+
+
+@frozen
+class PresetView:
+    """The statements that let a filter that integrates go on without a bump."""
+
+    wanted: str
     lines: tuple[LineView, ...]
 
 
@@ -72,11 +104,14 @@ class ProgramView:
     output: str
     lowest: int
     highest: int
+    others: str
+    """What happens with codes below or above."""
     delay_samples: int
     members: tuple[MemberView, ...]
     helpers: tuple[HelperView, ...]
     checks: tuple[CheckView, ...]
     blocks: tuple[BlockView, ...]
+    preset: PresetView | None
 
 
 def container(bits: int) -> str:
@@ -92,20 +127,24 @@ def program_view(program: Program, notes: tuple[str, ...]) -> ProgramView:
     symbols = Symbols.of(program.name)
     source = program.word(program.input)
     analysis = require_valid(program)
-    accepted = analysis.proved.get(source.name, Interval.of_word(source.bits))
-    printer = _Printer(program, symbols, analysis.may_overflow)
+    accepted = accepted_codes(program)
+    printer = _Printer(program, symbols, analysis)
     blocks = tuple(printer.block(number) for number in range(1, len(program.sections) + 1))
+    preset = None
+    if program.preset is not None:
+        preset = PresetView(symbols.local(program.preset.wanted), printer.preset(program.preset))
     width = container_bits(source.bits)
     return ProgramView(
         symbols=symbols,
         header_banner=header_banner(program, notes),
-        source_banner=source_banner(program),
+        source_banner=(*source_banner(program), *promise(program)),
         data_type=container(source.bits),
         data_bits=source.bits,
         input=symbols.local(program.input),
         output=symbols.local(program.output),
         lowest=accepted.lowest,
         highest=accepted.highest,
+        others=others(program),
         delay_samples=program.delay_samples,
         members=tuple(_member(word, symbols) for word in program.words if word.role is Role.STATE),
         helpers=printer.helpers(),
@@ -114,6 +153,7 @@ def program_view(program: Program, notes: tuple[str, ...]) -> ProgramView:
             CheckView(symbols("check_code_is_twos_complement"), f"INT{width}_MIN + INT{width}_MAX == -1"),
         ),
         blocks=blocks,
+        preset=preset,
     )
 
 
@@ -126,21 +166,30 @@ def _member(word: Word, symbols: Symbols) -> MemberView:
 class _Printer:
     """Steps as C statements; remembers which helpers they call."""
 
-    def __init__(self, program: Program, symbols: Symbols, may_overflow: frozenset[str]) -> None:
-        self.program, self.symbols, self.may_overflow = program, symbols, may_overflow
+    def __init__(self, program: Program, symbols: Symbols, analysis: Analysis) -> None:
+        self.program, self.symbols, self.may_overflow = program, symbols, analysis.may_overflow
+        self.in_preset = analysis.preset_may_overflow
+        self.words = {word.name: word for word in program.words}
         self.called: set[tuple[str, int]] = set()
 
     def block(self, number: int) -> BlockView:
         """The statements of section ``number``, 1 for the first."""
         section = self.program.sections[number - 1]
-        lines: list[LineView] = []
-        for step in section.steps:
-            if isinstance(step, Sum):
-                lines += self._sum(section, step)
-            else:
-                lines.append(LineView(f"{self._store(step.dest)} = {self._read(step.source)};"))
         title = f"Section {number} of {len(self.program.sections)}: from {section.source} to {section.dest}."
-        return BlockView(title, tuple(lines))
+        return BlockView(title, tuple(self._lines(section.steps, section.coefficients)))
+
+    def preset(self, preset: Preset) -> tuple[LineView, ...]:
+        """The statements that set the states."""
+        self.words |= {word.name: word for word in preset.words}
+        self.may_overflow = self.in_preset
+        return tuple(self._lines(preset.steps, ()))
+
+    def _lines(self, steps: Iterable[Step], coefficients: tuple[Coefficient, ...]) -> Iterator[LineView]:
+        for step in steps:
+            if isinstance(step, Sum):
+                yield from self._sum(step, coefficients)
+            else:
+                yield LineView(f"{self._store(step.dest)} = {self._read(step.source)};")
 
     def helpers(self) -> tuple[HelperView, ...]:
         """The helpers that the printed statements call, and those which these call."""
@@ -151,7 +200,7 @@ class _Printer:
             for kind, bits in ordered
         )
 
-    def _sum(self, section: ProgramSection, step: Sum) -> list[LineView]:
+    def _sum(self, step: Sum, coefficients: tuple[Coefficient, ...]) -> list[LineView]:
         total = f"sum_{step.dest}"
         lines = []
         for i, term in enumerate(step.terms):
@@ -162,7 +211,7 @@ class _Printer:
                 # the type of the sum is wide enough for the negative of any word, which the word's own need not be
                 operand = self._read(term.word) if term.factor == -1 else product
                 code = f"{total} {'-' if negative else '+'}= {operand};"
-            lines.append(LineView(code, _term_comment(section, term)))
+            lines.append(LineView(code, _term_comment(coefficients, term)))
         quotient = total
         if step.right_shift:
             bits = step.accumulator_bits
@@ -197,11 +246,12 @@ class _Printer:
         return f"({container(residue.bits)})({value})" if container_bits(residue.bits) < bits else value
 
     def _narrowed(self, step: Sum, value: str) -> str:
-        """The quotient after the overflow rule, in the type of its word."""
+        """The quotient after clamp or overflow rule, in the type of its word; what a clamp holds does not overflow."""
         bits, dest = step.accumulator_bits, self.program.word(step.dest)
-        if step.dest in self.may_overflow and step.overflow is Overflow.SATURATE:
-            ends = f"{integer(dest.lowest, bits)}, {integer(dest.highest, bits)}"
-            value = f"{self._call('clamp', bits)}({value}, {ends})"
+        saturated = step.dest in self.may_overflow and step.overflow is Overflow.SATURATE
+        limits = (dest.lowest, dest.highest) if saturated else step.limits
+        if limits is not None:
+            value = f"{self._call('clamp', bits)}({value}, {integer(limits[0], bits)}, {integer(limits[1], bits)})"
         elif step.dest in self.may_overflow:
             value = f"{self._call('wrap', bits)}({value}, {integer(dest.highest, bits)})"
         return f"({container(dest.bits)}){value}" if container_bits(dest.bits) < bits else value
@@ -211,17 +261,17 @@ class _Printer:
         return self.symbols(f"{kind}_{bits}")
 
     def _read(self, name: str) -> str:
-        word = self.program.word(name)
+        word = self.words[name]
         local = self.symbols.local(name)
         return f"state->{local}" if word.role is Role.STATE else local
 
     def _store(self, name: str) -> str:
-        word = self.program.word(name)
+        word = self.words[name]
         return self._read(name) if word.role is Role.STATE else f"const {container(word.bits)} {self._read(name)}"
 
 
-def _term_comment(section: ProgramSection, term: Term) -> str:
-    found = next((c for c in section.coefficients if c.name == term.label), None)
+def _term_comment(coefficients: tuple[Coefficient, ...], term: Term) -> str:
+    found = next((c for c in coefficients if c.name == term.label), None)
     texts = ["" if found is None else _coefficient_comment(found), term.note]
     return "; ".join(text for text in texts if text)
 

@@ -3,9 +3,13 @@
 While no word has overflowed, each word is the exact linear response to the input plus the responses to the roundings,
 whose sizes are known.  If the sum of the worst of all of these fits every word, no word ever overflows; so the bounds
 hold for ever, by induction over the samples.  If it does not fit, nothing is proved, and the result says which word.
+
+A state that integrates has no such bound: a clamp holds it.  The other words are bounded with it as one more input,
+anywhere within the clamp's limits; the output's error as long as no clamp acts, with the part that grows apart.
 """
 
 from functools import cached_property
+from itertools import count
 from math import ceil, floor, inf, sqrt
 
 import numpy as np
@@ -14,16 +18,30 @@ from numpy.typing import NDArray
 
 from afterkick.fixed.exact_response import exact_response
 from afterkick.fixed.linear import LinearSystem, RationalResponse, RoundingSource
-from afterkick.fixed.modal_sums import AbsoluteSum, absolute_sum, difference, modal_response, values
-from afterkick.fixed.program import Program
+from afterkick.fixed.modal_sums import (
+    AbsoluteSum,
+    ModalResponse,
+    absolute_sum,
+    difference,
+    modal_response,
+    values,
+    without_constant,
+)
+from afterkick.fixed.narrow import rounding_offset, shift_right
+from afterkick.fixed.program import Program, Sum, dependencies
+from afterkick.fixed.ranges import analyse
 from afterkick.fixed.simulate import simulate
 from afterkick.numbers import fraction
 from afterkick.sampling.sampled import Sampled
 
-__all__ = ["Attained", "Bounds", "OutputError", "WordRange", "WorstCase", "bounds", "worst_input"]
+__all__ = ["Attained", "Bounds", "Integration", "OutputError", "WordRange", "WorstCase", "bounds", "worst_input"]
 
 ATTAINING_SAMPLES = 8192
 """Of the worst input that is tried on the simulator."""
+LIFETIME_SAMPLES = 2.0**64
+"""A growth that does not add up to NOTHING counts in so many samples is counted as that: more than half a million years
+at a million samples a second."""
+NOTHING = 2.0**-20
 
 
 @frozen
@@ -38,6 +56,8 @@ class WordRange:
     from_rounding: float
     capacity_low: int
     capacity_high: int
+    clamped: bool = False
+    """Whether it is a clamp that holds the range."""
 
     @property
     def filling(self) -> float:
@@ -52,7 +72,10 @@ class WordRange:
 
 @frozen
 class OutputError:
-    """Bounds of the output's distance, in output counts, for every input within the promised peak."""
+    """Bounds of the output's distance, in output counts, for every input within the promised peak.
+
+    With a clamp they hold as long as it does not act.
+    """
 
     coefficients: float
     """The rounded coefficients against the exact sampled filter."""
@@ -60,11 +83,27 @@ class OutputError:
     """The roundings of all sums."""
     sampling: float
     """The sampled filter against the continuous model, at the samples, for staircase inputs."""
+    growth: float = 0.0
+    """What a filter that integrates adds for each sample that the worst input lasts, from all three causes."""
 
     @property
     def total(self) -> float:
-        """Against the continuous model, for staircase inputs."""
+        """Against the continuous model, for staircase inputs; without what grows."""
         return _up(self.coefficients + self.rounding + self.sampling)
+
+
+@frozen
+class Integration:
+    """How a filter integrates, by one state that a clamp holds."""
+
+    word: str
+    lowest: int
+    """What the clamp lets through, in output counts."""
+    highest: int
+    smallest_code: int
+    """The smallest constant input, of either sign, that is not lost."""
+    per_sample: float
+    """Output counts that a constant input of one code adds in each sample."""
 
 
 @frozen
@@ -92,7 +131,15 @@ class Bounds:
     output: OutputError | None
     """None where nothing is proved."""
     dead_band: float | None
-    """Bound of the output, in counts, long after the input has gone to zero; None where nothing is proved."""
+    """Bound of the output, in counts, long after the input has gone to zero; None where nothing is proved.
+
+    With a filter that integrates, of the output's distance from the value that is held then.
+    """
+    rounding: tuple[float, float] | None
+    """The least and the most that all roundings together add to the output; None where nothing is proved, and with a
+    filter that integrates."""
+    integration: Integration | None
+    """How the filter integrates; None where it does not, or not by one state that a clamp holds."""
     noise_rms: float | None
     """Estimate: white rounding errors, uniformly distributed, in counts; None where it has no limit."""
     peak_reached: Attained | None
@@ -111,6 +158,11 @@ class Bounds:
         listed = ", ".join(f"{word.word} (up to {100 * word.filling:.4g} % of it)" for word in self.overflowing)
         return f"words that may overflow: {listed}" if listed else ""
 
+    @property
+    def clamped(self) -> tuple[WordRange, ...]:
+        """The words that a clamp holds."""
+        return tuple(word for word in self.words if word.clamped)
+
     @cached_property
     def proved(self) -> bool:
         """Whether no word ever overflows."""
@@ -125,17 +177,20 @@ def bounds(program: Program, sampled: Sampled, held: Sampled | None) -> Bounds:
     """
     worst = WorstCase(program)
     output = next(word for word in worst.ranges if word.word == program.output)
-    to_output = worst.to_input[program.output]
-    unbounded = _unbounded(worst.ranges) if sampled.stable else _not_stable(sampled)
+    unbounded = _unbounded(worst.ranges) if sampled.stable or worst.held else _not_stable(sampled)
     proved = not unbounded and all(word.fits for word in worst.ranges)
+    error = _output_error(worst, sampled, held) if proved else None
+    to_output = worst.to_input[program.output]
     return Bounds(
         worst.peak_code,
         worst.ranges,
         unbounded,
-        _output_error(program, sampled, held, to_output, output, worst.peak_code) if proved else None,
-        float(floor(output.from_rounding)) if proved else None,
+        error,
+        float(floor(error.rounding)) if error is not None else None,
+        worst.rounding_span if error is not None and not worst.held else None,
+        _integration(worst) if proved else None,
         worst.noise_rms,
-        _peak_reached(program, to_output, output, worst.peak_code) if proved else None,
+        _peak_reached(program, to_output, output, worst.peak_code) if proved and not worst.held else None,
     )
 
 
@@ -153,9 +208,30 @@ class WorstCase:
         return min(ceil(fraction(program.input_format.peak / program.input_format.full_scale * scale)), scale)
 
     @cached_property
+    def held(self) -> dict[str, tuple[int, int]]:
+        """The words that integrate and that a clamp holds, with its limits."""
+        return {
+            step.dest: step.limits
+            for step in self.program.steps
+            if isinstance(step, Sum)
+            and step.limits is not None
+            and step.dest in dependencies(self.program, (term.word for term in step.terms))
+        }
+
+    @cached_property
+    def may_overflow(self) -> frozenset[str]:
+        """The words that interval arithmetic does not keep from overflowing."""
+        return analyse(self.program).may_overflow
+
+    @cached_property
     def system(self) -> LinearSystem:
-        """The exact linear system."""
-        return LinearSystem(self.program)
+        """The exact linear system, cut at the words that are held."""
+        return LinearSystem(self.program, frozenset(self.held))
+
+    @cached_property
+    def closed(self) -> LinearSystem:
+        """The same without any cut."""
+        return LinearSystem(self.program) if self.held else self.system
 
     @cached_property
     def to_input(self) -> dict[str, RationalResponse]:
@@ -168,6 +244,13 @@ class WorstCase:
         return {source: self.system.responses(source.dest) for source in self.system.sources}
 
     @cached_property
+    def closed_to_rounding(self) -> dict[RoundingSource, dict[str, RationalResponse]]:
+        """The same without any cut."""
+        if not self.held:
+            return self.to_rounding
+        return {source: self.closed.responses(source.dest) for source in self.closed.sources}
+
+    @cached_property
     def ranges(self) -> tuple[WordRange, ...]:
         """Of every computed word."""
         return tuple(self._range(name) for name in self.system.computed)
@@ -175,14 +258,47 @@ class WorstCase:
     @cached_property
     def noise_rms(self) -> float | None:
         """Estimate, of the output: white, uniformly distributed, independent rounding errors."""
-        variance = sum(self._sum(responses[self.program.output]).squares for responses in self.to_rounding.values())
+        to_output = (responses[self.program.output] for responses in self.closed_to_rounding.values())
+        variance = sum(self._sum(response).squares for response in to_output)
         return None if variance == inf else sqrt(variance / 12)
+
+    @cached_property
+    def rounding_span(self) -> tuple[float, float]:
+        """The least and the most that all roundings together add to the output."""
+        up, down = self.from_rounding(self.program.output, self.to_rounding)
+        return -down, up
+
+    @cached_property
+    def to_held(self) -> dict[str, dict[str, RationalResponse]]:
+        """Each computed word's response to each word that is held."""
+        return {name: self.system.responses(name) for name in self.held}
 
     def _range(self, name: str) -> WordRange:
         word = self.program.word(name)
+        if name in self.held:
+            low, high = self.held[name]
+            # a reset leaves the 0 that the limits may leave out
+            return WordRange(name, min(low, 0), max(high, 0), 0.0, 0.0, word.lowest, word.highest, clamped=True)
         reach = _up(self.peak_code * self._sum(self.to_input[name]).upper)
+        for source, responses in self.to_held.items():
+            reach = _up(reach + _up(max(map(abs, self.held[source])) * self._sum(responses[name]).upper))
+        up, down = self.from_rounding(name, self.to_rounding)
+        lowest, highest = _down(-reach - down), _up(reach + up)
+        if name not in self.may_overflow:
+            # no state and no input code can take it beyond: what the sum of the worst cases says more is its slack
+            lowest, highest = max(lowest, float(word.lowest)), min(highest, float(word.highest))
+        limits = next((s.limits for s in self.program.steps if isinstance(s, Sum) and s.dest == name), None)
+        clamped = limits is not None and not (limits[0] <= lowest and highest <= limits[1])
+        if limits is not None and clamped:
+            lowest, highest = max(lowest, limits[0]), min(highest, limits[1])
+        return WordRange(name, lowest, highest, reach, max(up, down), word.lowest, word.highest, clamped)
+
+    def from_rounding(
+        self, name: str, to_rounding: dict[RoundingSource, dict[str, RationalResponse]]
+    ) -> tuple[float, float]:
+        """How far up and down all roundings take a word at most."""
         up = down = 0.0
-        for source, responses in self.to_rounding.items():
+        for source, responses in to_rounding.items():
             response = responses[name]
             if response.numerator.is_zero():
                 continue
@@ -193,7 +309,7 @@ class WorstCase:
             slack = (size + abs(shift)) * 2.0**-48
             up = _up(up + _up(size + shift + slack))
             down = _up(down + _up(size - shift + slack))
-        return WordRange(name, _down(-reach - down), _up(reach + up), reach, max(up, down), word.lowest, word.highest)
+        return up, down
 
     @cached_property
     def _sums(self) -> dict[RationalResponse, AbsoluteSum]:
@@ -225,22 +341,69 @@ def _unbounded(words: tuple[WordRange, ...]) -> str:
     return f"unbounded: the response of {', '.join(names)} does not decay, so that only the word limits it"
 
 
-def _output_error(
-    program: Program,
-    sampled: Sampled,
-    held: Sampled | None,
-    response: RationalResponse,
-    output: WordRange,
-    peak: int,
-) -> OutputError:
+def _output_error(worst: WorstCase, sampled: Sampled, held: Sampled | None) -> OutputError:
+    program, peak = worst.program, worst.peak_code
     scale = program.input_format.full_scale / program.output_format.full_scale
+    response = worst.closed.responses(None)[program.output] if worst.held else worst.to_input[program.output]
     late = RationalResponse(response.numerator.right_shift(program.delay_samples), response.denominator)
     exact = exact_response(sampled, scale)
-    coefficients = peak * absolute_sum(difference(modal_response(late), exact)).upper
-    sampling = 0.0
-    if held is not None:
-        sampling = _up(peak * absolute_sum(difference(exact, exact_response(held, scale))).upper)
-    return OutputError(_up(coefficients), output.from_rounding, sampling)
+    coefficients = _with_growth(difference(modal_response(late), exact), peak)
+    sampling = (0.0, 0.0) if held is None else _with_growth(difference(exact, exact_response(held, scale)), peak)
+    rounding = (max(worst.from_rounding(program.output, worst.to_rounding)), 0.0)
+    if worst.held:
+        rounding = _rounding_with_growth(worst)
+    growth = _up(_up(coefficients[1] + rounding[1]) + sampling[1])
+    for_ever = _up(growth * LIFETIME_SAMPLES)
+    if for_ever < NOTHING:
+        return OutputError(_up(coefficients[0] + for_ever), rounding[0], sampling[0])
+    return OutputError(coefficients[0], rounding[0], sampling[0], growth)
+
+
+def _with_growth(response: ModalResponse, size: float) -> tuple[float, float]:
+    """``size`` times the absolute sum of what decays, and times what stays."""
+    rest, constant = without_constant(response)
+    return _up(size * absolute_sum(rest).upper), _up(size * constant)
+
+
+def _rounding_with_growth(worst: WorstCase) -> tuple[float, float]:
+    """Of the output while no clamp acts: what roundings add at most at any time, and for each sample."""
+    name = worst.program.output
+    total, growth = 0.0, 0.0
+    for source, responses in worst.closed_to_rounding.items():
+        response = responses[name]
+        if response.numerator.is_zero():
+            continue
+        size = float(fraction(max(abs(source.low), abs(source.high))))
+        found = _with_growth(modal_response(response), size)
+        total, growth = _up(total + found[0]), _up(growth + found[1])
+    return total, growth
+
+
+def _integration(worst: WorstCase) -> Integration | None:
+    """The state that is held, the sum that drives it, and what comes out of it."""
+    if len(worst.held) != 1:
+        return None
+    program = worst.program
+    ((state, limits),) = worst.held.items()
+    sums = {step.dest: step for step in program.steps if isinstance(step, Sum)}
+    driving = [sums[term.word] for term in sums[state].terms if term.word != state and term.word in sums]
+    if len(driving) != 1 or any(term.word in sums for term in driving[0].terms):
+        return None
+    step = driving[0]
+    factor = abs(sum(term.factor for term in step.terms))
+    per_sample = without_constant(modal_response(worst.closed.responses(None)[program.output]))[1]
+    if factor == 0:
+        return None
+    smallest = 1
+    if step.residue is None and step.right_shift:
+        nothing = rounding_offset(step.right_shift, step.rounding) or 1 << step.right_shift
+        smallest = next(
+            code
+            for code in count(max(nothing // factor, 1))
+            if all(shift_right(sign * code * factor, step.right_shift, step.rounding) for sign in (1, -1))
+        )
+    fraction_bits = program.word(state).fraction_bits - program.word(program.output).fraction_bits
+    return Integration(state, limits[0] >> fraction_bits, limits[1] >> fraction_bits, smallest, per_sample)
 
 
 def _peak_reached(program: Program, response: RationalResponse, output: WordRange, peak: int) -> Attained:

@@ -33,7 +33,8 @@ FACTORS = {1: (1,), 2: (2, -1)}
 
 
 def with_carry(program: Program, order: int, *, widest_accumulator: int = WIDEST_ACCUMULATOR) -> Program:
-    """``program`` with error feedback of order 1 or 2 in every sum that rounds and whose word is fed back to it.
+    """``program`` with error feedback of order 1 or 2 in every sum that rounds and whose word is fed back to it, or is
+    added up by a state that integrates.
 
     A sum that needs it gets an accumulator of 64 bits, if ``widest_accumulator`` allows.  A program in which nothing is
     fed back is returned as it is.
@@ -73,8 +74,11 @@ def _carried(program: Program, section: ProgramSection, factors: tuple[int, ...]
 
 
 def _feeds_back(program: Program, step: Sum) -> bool:
-    """Whether the sum's word has an influence on the sum itself, at a later sample."""
-    return step.dest in dependencies(program, (term.word for term in step.terms))
+    """Whether the sum's word has an influence on the sum itself at a later sample, or is added up by a state."""
+    if step.dest in dependencies(program, (term.word for term in step.terms)):
+        return True
+    adding = (other for other in program.steps if isinstance(other, Sum) and other.right_shift == 0)
+    return any(step.dest in (words := [t.word for t in other.terms]) and other.dest in words for other in adding)
 
 
 def _width(lowest: int, highest: int) -> int:

@@ -253,7 +253,7 @@ def unsupported(arithmetic: "Arithmetic") -> list[Problem]:
     """One problem for each option that these structures don't know."""
     checks = [
         ("kind", arithmetic.kind, arithmetic.kind == "fixed", '"fixed"', 'write kind = "fixed"'),
-        ("clamp", "a clamp", arithmetic.clamp is None, "no clamp", "remove clamp"),
+        ("clamp", "a clamp", arithmetic.clamp is None, "none in this structure", 'structure = "parallel"'),
     ]
     return [
         Problem(f"arithmetic.{key}", found, accepted, remedy)

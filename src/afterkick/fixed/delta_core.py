@@ -16,7 +16,7 @@ from flint import arb, ctx, fmpq
 
 from afterkick.errors import Refused
 from afterkick.fixed.cascade import SCALING_BITS, bits_of
-from afterkick.fixed.program import Coefficient
+from afterkick.fixed.program import Coefficient, Sum
 from afterkick.fixed.quantise import PROBE_BITS, ExactSection, Triple, denominator_problems
 from afterkick.fixed.scaling import FloatSection
 from afterkick.fixed.wide import (
@@ -46,6 +46,8 @@ __all__ = ["Numbers", "delta_core", "slope"]
 
 WITHOUT_NORM = 4
 """Fraction bits beyond log2 of a time constant where a rounding error never decays."""
+HELD = -1
+"""log2 of what a state that a clamp holds within its data word needs above that, less the spare bit of others."""
 SEARCHED = 16
 """Last places of c that are searched for the best ratio n : c, as far as this is 2^-10 of c at most."""
 
@@ -101,7 +103,7 @@ def delta_core(section: ExactSection, frame: Frame, gain: tuple[Scaled, ...] = (
 
     :raises Refused: where a coefficient loses its meaning, or words or sums are too narrow.
     """
-    fractions, reaches = frame.fraction_bits(_errors(section)), frame.reaches(_shapes(section))
+    fractions, reaches = frame.fraction_bits(_errors(section)), frame.reaches(_shapes(section, frame))
     fractions = frame.within(section.number, fractions, reaches, [i == 0 for i in range(len(fractions))])
     lengths = range(frame.builder.coefficient_bits, LEAST_COEFFICIENT_BITS - 1, -1)
     for bits, faint in product(lengths, range(1 if gain else 3)):
@@ -138,14 +140,15 @@ def slope(exact: Numbers) -> float:
     return max(abs(mid_float(exact.c[0])), math.sqrt(abs(mid_float(exact.c[-1]))), 2.0**-40)
 
 
-def _shapes(section: ExactSection) -> tuple[FloatSection | int, ...]:
+def _shapes(section: ExactSection, frame: Frame) -> tuple[FloatSection | int, ...]:
     """The response of each state to the section's input; where it does not decay, to the output's full scale."""
     with working_bits(SCALING_BITS):
         exact = Numbers.of(section)
         (b0, b1, b2), (_, a1, a2) = exact.b, exact.a
         if endless_at(section):
             no_slope = all(c.contains(0) for c in exact.c)
-            return (1, 1 if no_slope else 1 + math.ceil(math.log2(slope(exact))))[: len(exact.c)]
+            first_reach = HELD if section.pole_at_one and frame.limits is not None else 1
+            return (first_reach, 1 if no_slope else 1 + math.ceil(math.log2(slope(exact))))[: len(exact.c)]
         first = ball_floats((arb(0), b1 - b0 * a1, b2 - b0 * a2), exact.a)
         if len(exact.c) == 1:
             return (first,)
@@ -285,7 +288,8 @@ def _core(
         if not sheet.temporary(differences[i], driving, fractions[i]):
             return None
     for state, difference in zip(states, differences, strict=True):
-        if not sheet.state(state, (state, difference)):
+        limits = frame.limits if section.pole_at_one and state == wide else None
+        if not sheet.state(state, (state, difference), limits):
             return None
     return Core(
         tuple(sheet.words),
@@ -296,7 +300,22 @@ def _core(
         fractions[0],
         *integers.transfer,
         _coefficients(section, integers, fractions),
+        _steady(section, sheet, integers, states),
     )
+
+
+def _steady(section: ExactSection, sheet: Sheet, integers: Integers, states: list[str]) -> tuple[Sum, ...] | None:
+    """w = gain x, and of order 2 c1 w = n1 x + s2; the output of a pole at z = 1 is not among them."""
+    sums = []
+    source = sheet.frame.source
+    if integers.gain:
+        sums.append(sheet.steady(states[0], [(part, source, "") for part in integers.gain]))
+    elif not section.pole_at_one or integers.n[0].integer:
+        return None
+    if len(states) > 1:
+        slope_taken = Scaled(-integers.n[1].integer, integers.n[1].fraction_bits)
+        sums.append(sheet.steady(states[1], [(integers.c[0], states[0], ""), (slope_taken, source, "")]))
+    return None if None in sums else tuple(one for one in sums if one is not None)
 
 
 def _coefficients(section: ExactSection, integers: Integers, fractions: tuple[int, ...]) -> tuple[Coefficient, ...]:

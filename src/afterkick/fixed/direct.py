@@ -21,6 +21,7 @@ from afterkick.fixed.cascade import (
     renamed,
     scaled,
     signal_words,
+    unsupported,
 )
 from afterkick.fixed.kept import exact_dc_gain
 from afterkick.fixed.program import (
@@ -118,18 +119,12 @@ class _Plan:
 
 
 def _unsupported(arithmetic: "Arithmetic") -> list[Problem]:
-    later = "not supported yet"
-    checks = [
-        ("kind", arithmetic.kind, arithmetic.kind == "fixed", '"fixed"'),
-        ("structure", arithmetic.structure, arithmetic.structure == "direct", '"direct"'),
-        ("state_bits", str(arithmetic.state_bits), arithmetic.state_bits in (None, arithmetic.data_bits), "data_bits"),
-        ("clamp", "a clamp", arithmetic.clamp is None, "no clamp"),
-    ]
-    return [
-        Problem(f"arithmetic.{key}", f"{found} is {later}", accepted, f"leave {key} out")
-        for key, found, supported, accepted in checks
-        if not supported
-    ]
+    problems = unsupported(arithmetic)
+    if arithmetic.state_bits not in (None, arithmetic.data_bits):
+        found = f"states of {arithmetic.state_bits} bits"
+        accepted = f"data_bits, {arithmetic.data_bits}: the states are data words"
+        problems.append(Problem("arithmetic.state_bits", found, accepted, "leave state_bits out"))
+    return problems
 
 
 def _plan(section: ExactSection, builder: Builder) -> _Plan:

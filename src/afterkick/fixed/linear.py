@@ -3,6 +3,9 @@
 Every Sum is the exact linear form of its terms plus a rounding error within known limits, as long as nothing overflows;
 its residue, if it is kept, is that error with the opposite sign, at the scale of the sum; a Move is itself.  All
 coefficients are rational, so the responses and their transfer functions are too.
+
+A word that a clamp holds may be cut off from its sum: it is then one more source, of values within the clamp's limits,
+and what is proved of the others holds whatever the clamp does.
 """
 
 from functools import cached_property
@@ -65,14 +68,16 @@ class LinearSystem:
     """The responses of a program's words, in last places of each word per unit of the source."""
 
     program: Program
+    cut: frozenset[str] = frozenset()
+    """Words that are cut off from their sums."""
 
     @cached_property
     def sources(self) -> tuple[RoundingSource, ...]:
-        """One for each Sum that rounds."""
+        """One for each Sum that rounds, of words that are not cut off."""
         return tuple(
             RoundingSource(step.dest, *_rounding_limits(step))
             for step in self.program.steps
-            if isinstance(step, Sum) and step.right_shift > 0
+            if isinstance(step, Sum) and step.right_shift > 0 and step.dest not in self.cut
         )
 
     @cached_property
@@ -94,7 +99,10 @@ class LinearSystem:
         return product
 
     def responses(self, source: str | None) -> dict[str, RationalResponse]:
-        """Of every computed word to a unit input sample (None), or to one last place added to the Sum of ``source``."""
+        """Of every computed word to a unit input sample (None), or to one last place added to the Sum of ``source``.
+
+        Of a word that is cut off, to one last place in that word.
+        """
         order = self.denominator.degree()
         # The common recurrence is checked over as many samples as the system has states: it then holds for ever.
         length = order + 2 * len(self.states) + 4
@@ -126,7 +134,7 @@ class LinearSystem:
                 error = 1 if n == 0 and step.dest == source else 0
                 if step.residue is not None:
                     words[step.residue] = fmpq(-error << step.right_shift)
-                total += error
+                total = fmpq(error) if step.dest in self.cut else total + error
                 words[step.dest] = total
                 histories[step.dest].append(total)
         return histories

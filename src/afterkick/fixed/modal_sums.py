@@ -19,7 +19,7 @@ from afterkick.model.partial_fractions import Mode, expand, modes_known, polynom
 from afterkick.model.roots import RADIANS, algebraic_roots
 from afterkick.numbers import certified, working_bits
 
-__all__ = ["AbsoluteSum", "ModalResponse", "absolute_sum", "difference", "modal_response", "values"]
+__all__ = ["AbsoluteSum", "ModalResponse", "absolute_sum", "difference", "modal_response", "values", "without_constant"]
 
 BLOCK = 4096
 LONGEST = 1 << 23
@@ -80,6 +80,20 @@ def difference(one: ModalResponse, other: ModalResponse) -> ModalResponse:
     first = tuple(a - b for a, b in zip(_extended(one, length), _extended(other, length), strict=True))
     negated = tuple(Mode(m.pole, m.real, tuple(-c for c in m.coefficients)) for m in other.modes)
     return ModalResponse(first, one.modes + negated)
+
+
+def without_constant(response: ModalResponse) -> tuple[ModalResponse, float]:
+    """The response without its poles at z = 1, and a bound of the magnitude they stay at, infinite if they grow."""
+    endless = [mode for mode in response.modes if _at_one(mode)]
+    rest = ModalResponse(response.first, tuple(mode for mode in response.modes if not _at_one(mode)))
+    if any(not c.is_zero() for mode in endless for c in mode.coefficients[1:]):
+        return rest, inf
+    constant = sum((mode.coefficients[0].real for mode in endless), arb(0))
+    return rest, _up(float(abs(constant).upper()))
+
+
+def _at_one(mode: Mode) -> bool:
+    return bool((mode.pole - 1).is_zero())
 
 
 def absolute_sum(response: ModalResponse) -> AbsoluteSum:

@@ -10,7 +10,7 @@ from numpy.typing import NDArray
 
 from afterkick.fixed.program import Overflow, Rounding
 
-__all__ = ["fit", "residue_limits", "rounding_offset", "saturate", "shift_right", "wrap"]
+__all__ = ["clamp", "fit", "residue_limits", "rounding_offset", "saturate", "shift_right", "wrap"]
 
 Value = TypeVar("Value", int, NDArray[np.int64])
 
@@ -43,12 +43,17 @@ def residue_limits(right_shift: int, rounding: Rounding) -> tuple[int, int]:
     return -half, half if rounding is Rounding.EVEN else half - 1
 
 
-def saturate(value: Value, bits: int) -> Value:
-    """The nearest value that a word of ``bits`` bits holds."""
-    lowest, highest = -(1 << (bits - 1)), (1 << (bits - 1)) - 1
+def clamp(value: Value, limits: tuple[int, int]) -> Value:
+    """The nearest value from limits[0] to limits[1]."""
+    lowest, highest = limits
     if isinstance(value, int):
         return min(max(value, lowest), highest)
     return np.minimum(np.maximum(value, lowest), highest)
+
+
+def saturate(value: Value, bits: int) -> Value:
+    """The nearest value that a word of ``bits`` bits holds."""
+    return clamp(value, (-(1 << (bits - 1)), (1 << (bits - 1)) - 1))
 
 
 def wrap(value: Value, bits: int) -> Value:

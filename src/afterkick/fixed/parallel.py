@@ -1,12 +1,15 @@
 """The parallel structure: partial fractions, every part fed by the input, all added up in one wide sum.
 
-H is a direct part plus a part for each pole and pole pair, in the delta form, with one rounding for all of them.  The
-gains of the parts at z = 1 lie on one grid, and the largest gives way so that they add up to the gain of the filter,
-exactly where the grid has it.
+H is a few taps on the input plus a part for each pole and pole pair, in the delta form, with one rounding for all of
+them.  The gains of the parts at z = 1 lie on one grid, and the largest gives way so that they add up to the gain of the
+filter, exactly where the grid has it.
+
+This is the form of a controller: a pole at z = 1 is a part of its own, a wide state that adds up its input without
+rounding and that a clamp holds within the limits of the output, so that it does not wind up.
 """
 
 import math
-from collections.abc import Callable
+from collections.abc import Callable, Iterator
 from fractions import Fraction
 from typing import TYPE_CHECKING, cast
 
@@ -24,12 +27,26 @@ from afterkick.fixed.cascade import (
     unsupported,
 )
 from afterkick.fixed.delta_core import Numbers, delta_core, slope
-from afterkick.fixed.program import Coefficient, Program, ProgramSection, Role, Word
+from afterkick.fixed.parts import Parts
+from afterkick.fixed.program import Coefficient, Move, Preset, Program, ProgramSection, Role, Step, Word
 from afterkick.fixed.quantise import PROBE_BITS, ExactSection, exact_sections
+from afterkick.fixed.ranges import Interval, require_valid
 from afterkick.fixed.scaling import FloatSection
-from afterkick.fixed.wide import ZERO, Core, Frame, Scaled, floor_log2, output_sum, over_power_of_two, rounded, simplest
+from afterkick.fixed.wide import (
+    ONE,
+    ZERO,
+    Core,
+    Frame,
+    Scaled,
+    Weighed,
+    floor_log2,
+    output_sum,
+    over_power_of_two,
+    rounded,
+    simplest,
+    weighed_sum,
+)
 from afterkick.numbers import fraction, mid_float, round_to_integer, to_text, working_bits
-from afterkick.sampling.sections import Section
 
 if TYPE_CHECKING:
     from afterkick.design.schema import Arithmetic, Signals
@@ -37,29 +54,34 @@ if TYPE_CHECKING:
 
 __all__ = ["parallel_program"]
 
+MINUS_ONE = Scaled(-1, 0)
+MOST_TAPS = 3
+WANTED = "wanted"
+
 
 def parallel_program(
     sampled: "Sampled", arithmetic: "Arithmetic", signals: "Signals", name: str, *, title: str = "", digest: str = ""
 ) -> Program:
     """The integer filter that realises H * (input full scale / output full scale) as a sum of its partial fractions.
 
-    Its first section is the direct part, and adds all up; the others are the parts.
+    Its first section has the taps on the input, and adds all up; the others are the parts.  A clamp holds the output
+    within its limits, and a part with a pole at z = 1 too; without one the limits are those of the data word.
 
-    :raises Refused: for repeated poles, and as the delta structure.
+    :raises Refused: for repeated poles other than real double ones, and as the delta structure.
     """
-    problems = unsupported(arithmetic) + delay_problems(sampled.delay_samples)
-    if sampled.parallel(PROBE_BITS) is None:
+    problems = unsupported(evolve(arithmetic, clamp=None)) + delay_problems(sampled.delay_samples)
+    parts = Parts(sampled)
+    if not parts.exist or len(parts.taps(PROBE_BITS)) > MOST_TAPS:
         problems.append(
             Problem(
                 "arithmetic.structure",
-                "a filter with a repeated pole, or one at z = 0, has no sum of first- and second-order parts",
-                "poles that all differ",
+                "a filter with a repeated pole, or with several at z = 0, has no sum of first- and second-order parts",
+                f"poles that all differ, but a real one may be double, and up to {MOST_TAPS - 1} may be at z = 0",
                 'structure = "delta" or another cascade',
             )
         )
     if problems:
         raise Refused(problems)
-    parts = _Parts(sampled)
     ratio = signals.input.full_scale / signals.output.full_scale
     sections = [evolve(section, gain=ratio) for section in exact_sections(cast("Sampled", parts))]
     builder = Builder.of(arithmetic)
@@ -76,8 +98,9 @@ def parallel_program(
         (FloatSection((peak, 0.0, 0.0), (0.0, 0.0), 0),),
         (),
         4 * len(sections),
+        _limits(arithmetic.clamp, signals, builder.data_bits),
     )
-    direct, gains = _gains(parts, sections, ratio, builder.coefficient_bits)
+    taps, gains = _gains(parts, sections, ratio, builder.coefficient_bits)
     cores = []
     for section, gain in zip(sections, gains, strict=True):
         try:
@@ -86,50 +109,49 @@ def parallel_program(
             problems += refusal.problems
     if problems:
         raise Refused(problems)
-    wired = _wired(parts, sections, cores, direct, ratio, frame, sampled.delay_samples)
-    return finished(wired, "parallel", sampled, arithmetic, signals, name, title=title, digest=digest)
+    weighed = [(tap, delayed("x", sampled.delay_samples + i), _tap_name(i)) for i, tap in enumerate(taps)]
+    depth = sampled.delay_samples + len(taps) - 1
+    held = arithmetic.clamp is not None or any(section.pole_at_one for section in sections)
+    wired = (
+        _adding_section(parts, cores, taps, weighed, ratio, frame, depth=depth, held=held),
+        *_part_sections(sections, cores, frame, depth),
+    )
+    preset = _preset(sections, cores, weighed, frame, depth)
+    program = finished(wired, "parallel", sampled, arithmetic, signals, name, title=title, digest=digest)
+    if preset is None:
+        return program
+    program = evolve(program, preset=preset)
+    require_valid(program)
+    return program
 
 
-class _Parts:
-    """The partial fractions as sections without b0, and the direct part, which is the first sample of H."""
+def _limits(clamp: tuple[fmpq, fmpq] | None, signals: "Signals", data_bits: int) -> tuple[int, int]:
+    """The codes within the clamp, or all codes.
 
-    def __init__(self, sampled: "Sampled") -> None:
-        self.sampled = sampled
-        self.marginal = sampled.marginal
-        self.known: dict[int, tuple[arb, tuple[Section, ...]]] = {}
+    :raises Refused: where no two are within it.
+    """
+    scale = 1 << (data_bits - 1)
+    if clamp is None:
+        return -scale, scale - 1
+    low, high = (fraction(end / signals.output.full_scale) * scale for end in clamp)
+    lowest, highest = math.ceil(low), min(math.floor(high), scale - 1)
+    if lowest >= highest:
+        found = f"limits at {float(low):.6g} and {float(high):.6g} output counts"
+        accepted = "limits with two codes or more between them"
+        raise Refused(Problem("arithmetic.clamp", found, accepted, "wider limits, or a smaller output full_scale"))
+    return lowest, highest
 
-    def _parts(self, bits: int) -> tuple[arb, tuple[Section, ...]]:
-        if bits not in self.known:
-            self.known[bits] = self._computed(bits)
-        return self.known[bits]
 
-    def _computed(self, bits: int) -> tuple[arb, tuple[Section, ...]]:
-        found = self.sampled.parallel(bits)
-        assert found is not None
-        with working_bits(max(bits, ctx.prec)):
-            direct, none = found[0], arb(0)
-            sections = []
-            for part in found[1]:
-                (r0, r1), (_, a1, a2) = part.b, part.a
-                direct += r0
-                sections.append(Section((none, r1 - r0 * a1, -r0 * a2), part.a))
-            return direct, tuple(sections)
-
-    def sections(self, bits: int) -> tuple[Section, ...]:
-        """One a pole or pole pair."""
-        return self._parts(bits)[1]
-
-    def direct(self, bits: int) -> arb:
-        """H at z = infinity."""
-        return self._parts(bits)[0]
+def _tap_name(index: int) -> str:
+    return f"direct{index}" if index else "direct"
 
 
 def _gains(
-    parts: _Parts, sections: list[ExactSection], ratio: fmpq, bits: int
-) -> tuple[Scaled, list[tuple[Scaled, ...]]]:
-    """The direct part, and the gain of each part at z = 1, none for a pole there: on one grid and with an exact sum.
+    parts: Parts, sections: list[ExactSection], ratio: fmpq, bits: int
+) -> tuple[tuple[Scaled, ...], list[tuple[Scaled, ...]]]:
+    """The taps, and the gain of each part at z = 1, none for a pole there: on one grid and with an exact sum.
 
-    The part with the largest gain also takes away what the direct part adds at z = 1.
+    The part with the largest gain also takes away what the taps add at z = 1.
     """
 
     def exact() -> list[arb]:
@@ -138,19 +160,22 @@ def _gains(
 
     endless = [section.pole_at_one for section in sections]
     with working_bits(PROBE_BITS):
-        first = parts.direct(PROBE_BITS) * ratio
+        first = [tap * ratio for tap in parts.taps(PROBE_BITS)]
         probed = exact()
-        total = sum(probed, first)
-        # about the largest sample of the impulse response: the direct part need not be finer
+        total = sum(probed, sum(first, arb(0)))
+        # about the largest sample of the impulse response: the taps need not be finer
         peak = max(
             abs(mid_float(number)) / slope(part) ** i
             for part in map(Numbers.of, sections)
             for i, number in enumerate(part.n[1:])
         )
-    direct = ZERO
-    if not first.contains(0):
-        finest = bits + 2 - math.floor(math.log2(peak)) if peak else None
-        direct = rounded(lambda: parts.direct(ctx.prec) * ratio, bits, "the direct part", finest)
+    finest = bits + 2 - math.floor(math.log2(peak)) if peak else None
+    taps = tuple(
+        ZERO
+        if tap.contains(0)
+        else rounded(lambda: parts.taps(ctx.prec)[i] * ratio, bits, f"tap {i} of the direct part", finest)  # noqa: B023
+        for i, tap in enumerate(first)
+    )
     largest = max((floor_log2(value) for value in probed if not value.contains(0)), default=0)
     limit, grid = 1 << (bits - 1), bits - largest
     whole = not any(endless)
@@ -163,10 +188,10 @@ def _gains(
             break
         grid -= 1
     gains: list[tuple[Scaled, ...]] = [(Scaled(integer, grid),) for integer in integers]
-    if whole and direct.integer:
-        gains[most] += (Scaled(-direct.integer, direct.fraction_bits),)
+    if whole:
+        gains[most] += tuple(Scaled(-tap.integer, tap.fraction_bits) for tap in taps if tap.integer)
     rest = iter(gains)
-    return direct, [() if found else next(rest) for found in endless]
+    return taps, [() if found else next(rest) for found in endless]
 
 
 def _on_grid(compute: Callable[[], arb], probed: arb, grid: int) -> int:
@@ -180,50 +205,82 @@ def _simple(total: arb) -> Fraction:
         return Fraction(0) if total.contains(0) else simplest(total)
 
 
-def _wired(
-    parts: _Parts,
-    sections: list[ExactSection],
+def _adding_section(
+    parts: Parts,
     cores: list[Core],
-    direct: Scaled,
+    taps: tuple[Scaled, ...],
+    weighed: list[Weighed],
     ratio: fmpq,
     frame: Frame,
-    delay_samples: int,
-) -> tuple[ProgramSection, ...]:
-    """The output first, from the states as they were, then what brings each part on."""
+    *,
+    depth: int,
+    held: bool,
+) -> ProgramSection:
+    """The output, from the states as they were, before what brings the parts on; the input is kept for ``depth``."""
     builder = frame.builder
-    with working_bits(PROBE_BITS):
-        exact = parts.direct(PROBE_BITS) * ratio
-        error = mid_float(direct.integer - exact * fmpq(2) ** direct.fraction_bits)
-        row = Coefficient("direct", direct.integer, direct.fraction_bits, to_text(exact, 9), error)
     output = Word("y", builder.data_bits, frame.place, Role.OUTPUT)
-    b, b_bits = over_power_of_two(direct.value, Fraction(0), Fraction(0))
-    wired = [
-        ProgramSection(
-            words=(*signal_words("x", Role.INPUT, frame.place, delay_samples, builder.data_bits), output),
-            steps=(output_sum(builder, cores, (direct, frame.source)),),
-            source=frame.source,
-            dest=output.name,
-            b=b,
-            b_fraction_bits=b_bits,
-            a=(1, 0, 0),
-            a_fraction_bits=0,
-            coefficients=(row,) if direct.integer else (),
-        )
-    ]
+    rows = []
+    with working_bits(PROBE_BITS):
+        for i, (tap, exact) in enumerate(zip(taps, parts.taps(PROBE_BITS), strict=True)):
+            error = mid_float(tap.integer - exact * ratio * fmpq(2) ** tap.fraction_bits)
+            rows.append(Coefficient(_tap_name(i), tap.integer, tap.fraction_bits, to_text(exact * ratio, 9), error))
+    b, b_bits = over_power_of_two(*[tap.value for tap in (*taps, ZERO, ZERO)][:3])
+    return ProgramSection(
+        words=(*signal_words("x", Role.INPUT, frame.place, depth, builder.data_bits), output),
+        steps=(output_sum(builder, cores, weighed, frame.limits if held else None),),
+        source=frame.source,
+        dest=output.name,
+        b=b,
+        b_fraction_bits=b_bits,
+        a=(1, 0, 0),
+        a_fraction_bits=0,
+        coefficients=tuple(row for row in rows if row.integer),
+    )
+
+
+def _part_sections(
+    sections: list[ExactSection], cores: list[Core], frame: Frame, depth: int
+) -> Iterator[ProgramSection]:
+    """What brings each part on, and at the end the input words."""
     for section, core in zip(sections, cores, strict=True):
         last = section is sections[-1]
-        wired.append(
-            ProgramSection(
-                words=core.words,
-                steps=(*core.steps, *(moves("x", delay_samples) if last else ())),
-                source=frame.source,
-                dest=core.wide,
-                b=core.b,
-                b_fraction_bits=core.b_bits,
-                a=core.a,
-                a_fraction_bits=core.a_bits,
-                coefficients=core.coefficients,
-                marginal=section.marginal,
-            )
+        yield ProgramSection(
+            words=core.words,
+            steps=(*core.steps, *(moves("x", depth) if last else ())),
+            source=frame.source,
+            dest=core.wide,
+            b=core.b,
+            b_fraction_bits=core.b_bits,
+            a=core.a,
+            a_fraction_bits=core.a_bits,
+            coefficients=core.coefficients,
+            marginal=section.marginal,
         )
-    return tuple(wired)
+
+
+def _preset(
+    sections: list[ExactSection], cores: list[Core], weighed: list[Weighed], frame: Frame, depth: int
+) -> Preset | None:
+    """The parts at rest, and the one that integrates at what they and the taps leave of the wanted output.
+
+    None without a part that integrates, with several, or where a sum is too wide.
+    """
+    whole = [core for section, core in zip(sections, cores, strict=True) if section.pole_at_one]
+    if len(whole) != 1 or any(core.steady is None for core in cores):
+        return None
+    steps: list[Step] = [Move(delayed("x", age), delayed("x", age - 1)) for age in range(1, depth + 1)]
+    steps += [step for core in cores for step in core.steady or ()]
+    (free,) = whole
+    others = [core for core in cores if core is not free]
+    ranges = {core.wide: Interval.of_word(core.bits) for core in others}
+    ranges |= {word: Interval.of_word(frame.builder.data_bits) for word in (WANTED, *(word for _, word, _ in weighed))}
+    fractions = {core.wide: core.fraction_bits for core in others} | {WANTED: 0} | {word: 0 for _, word, _ in weighed}
+    left: list[Weighed] = [(ONE, WANTED, ""), *((MINUS_ONE, core.wide, "") for core in others)]
+    left += [(Scaled(-tap.integer, tap.fraction_bits), word, "") for tap, word, _ in weighed]
+    total = weighed_sum(frame.builder, free.wide, left, fractions, ranges, free.fraction_bits)
+    if total is None:
+        return None
+    assert frame.limits is not None
+    lowest, highest = (end << free.fraction_bits for end in frame.limits)
+    steps.append(evolve(total, limits=(lowest, highest)))
+    return Preset((Word(WANTED, frame.builder.data_bits, frame.place, Role.INPUT),), tuple(steps), WANTED)

@@ -15,6 +15,7 @@ __all__ = [
     "Coefficient",
     "Move",
     "Overflow",
+    "Preset",
     "Program",
     "ProgramSection",
     "Proof",
@@ -107,9 +108,10 @@ class Term:
 class Sum:
     """``dest = narrow((sum of the terms) >> right_shift)``.
 
-    The sum is exact in ``accumulator_bits`` (32 or 64) bits; the shift rounds by ``rounding``; what the destination
-    can't hold is treated by ``overflow``.  What the shift drops, sum - (quotient << right_shift), goes into the word
-    ``residue``, if there is one: the quotient is taken before the overflow rule acts, so that no excess is in it.
+    The sum is exact in ``accumulator_bits`` (32 or 64) bits; the shift rounds by ``rounding``; the result is held
+    within the clamp ``limits``, if there are any; what the destination can't hold is treated by ``overflow``.  What the
+    shift drops, sum - (quotient << right_shift), goes into the word ``residue``, if there is one: the quotient is taken
+    before clamp and overflow rule act, so that no excess is in it.
     """
 
     dest: str
@@ -119,6 +121,8 @@ class Sum:
     rounding: Rounding
     overflow: Overflow
     residue: str | None = None
+    limits: tuple[int, int] | None = None
+    """Lowest and highest value of the destination that the clamp lets through."""
 
 
 @frozen
@@ -199,6 +203,20 @@ class Proof:
 
 
 @frozen
+class Preset:
+    """What gives the states of a filter that integrates the values from which it goes on without a bump.
+
+    Its steps read the input and the word ``wanted``, write every state, and leave the filter so that its output is the
+    wanted code for as long as the input stays the same and nothing is integrated.
+    """
+
+    words: tuple[Word, ...]
+    """Those that are not the program's own."""
+    steps: tuple[Step, ...]
+    wanted: str
+
+
+@frozen
 class Program:
     """Everything that the shipped integers do, and what the printers say about it."""
 
@@ -224,6 +242,8 @@ class Program:
     """Of the design; printed, never interpreted."""
     carry: int = 0
     """How many past residues the error feedback uses: 0 is none."""
+    preset: Preset | None = None
+    """None where nothing is integrated, or by a structure that does not keep it apart."""
     proof: Proof | None = None
     """A word in it is neither saturated nor wrapped; the simulator refuses a run that leaves its range."""
     _words: dict[str, Word] = field(init=False, repr=False, eq=False)

@@ -6,11 +6,13 @@ Every partial sum is covered in any order of the terms, the rounding offset incl
 undefined in C.
 """
 
-from attrs import frozen
+from collections.abc import Iterable
+
+from attrs import field, frozen
 
 from afterkick.errors import Problem, Refused
-from afterkick.fixed.narrow import residue_limits, rounding_offset, shift_right
-from afterkick.fixed.program import Move, Program, Role, Step, Sum, Term
+from afterkick.fixed.narrow import clamp, residue_limits, rounding_offset, shift_right
+from afterkick.fixed.program import Move, Program, Role, Step, Sum, Term, Word
 
 __all__ = ["Analysis", "Interval", "SumRange", "analyse", "largest_partial_sum", "require_valid", "sum_range"]
 
@@ -43,7 +45,7 @@ class SumRange:
     magnitude: int
     """No partial sum, in any order of the terms and with the rounding offset, has a larger magnitude."""
     result: Interval
-    """After the right shift, before the overflow rule."""
+    """After the right shift and the clamp, before the overflow rule."""
 
 
 def largest_partial_sum(terms: tuple[Term, ...], ranges: dict[str, Interval], offset: int) -> int:
@@ -68,6 +70,8 @@ def sum_range(step: Sum, ranges: dict[str, Interval]) -> SumRange:
     result = Interval(
         shift_right(lowest, step.right_shift, step.rounding), shift_right(highest, step.right_shift, step.rounding)
     )
+    if step.limits is not None:
+        result = Interval(clamp(result.lowest, step.limits), clamp(result.highest, step.limits))
     return SumRange(largest_partial_sum(step.terms, ranges, offset), result)
 
 
@@ -81,6 +85,8 @@ class Analysis:
     """The words whose overflow rule can come into play; for all others it is proved that it can't."""
     proved: dict[str, Interval]
     """What the program's proof says of its words, the input and delayed copies included."""
+    preset_may_overflow: frozenset[str] = frozenset()
+    """The states whose overflow rule can come into play in the preset."""
 
 
 def analyse(program: Program) -> Analysis:
@@ -91,54 +97,86 @@ def analyse(program: Program) -> Analysis:
     unsound = _word_faults(program)
     if unsound:
         return Analysis(unsound, frozenset(word.name for word in program.words), {})
-    found: list[str] = []
-    may_overflow: set[str] = set()
     proved = _proved(program)
     known = {word.name: Interval.of_word(word.bits) for word in program.words} | proved
-    ranges = {word.name: known[word.name] for word in program.words if word.role in (Role.INPUT, Role.STATE)}
-    written: set[str] = set()
-    for step in program.steps:
+    start = {word.name: known[word.name] for word in program.words if word.role in (Role.INPUT, Role.STATE)}
+    words = {word.name: word for word in program.words}
+    walk = _Walk(program, words, known, proved, start)
+    if walk.through(program.steps) and program.output not in walk.written:
+        walk.faults.append(f"the output {program.output} is never written")
+    if program.preset is None or walk.faults:
+        return Analysis(tuple(walk.faults), frozenset(walk.may_overflow), proved)
+    # a preset starts from a reset, and from any input code
+    words |= {word.name: word for word in program.preset.words}
+    whole = {name: Interval.of_word(word.bits) for name, word in words.items()}
+    start = {program.input: whole[program.input], program.preset.wanted: whole[program.preset.wanted]}
+    preset = _Walk(program, words, whole, {}, start)
+    preset.through(program.preset.steps)
+    return Analysis(tuple(preset.faults), frozenset(walk.may_overflow), proved, frozenset(preset.may_overflow))
+
+
+@frozen
+class _Walk:
+    """One pass through steps; ``ranges`` is what is known of the words that may be read."""
+
+    program: Program
+    words: dict[str, Word]
+    known: dict[str, Interval]
+    proved: dict[str, Interval]
+    ranges: dict[str, Interval]
+    faults: list[str] = field(factory=list)
+    may_overflow: set[str] = field(factory=set)
+    written: set[str] = field(factory=set)
+
+    def through(self, steps: Iterable[Step]) -> bool:
+        """Whether no step has a fault that hides what comes after it; the walk ends at such a one."""
+        for step in steps:
+            if not self._names(step):
+                return False
+            dest = self.words[step.dest]
+            if isinstance(step, Sum):
+                faults = (
+                    _sum_faults(step, self.ranges) + _residue_faults(step, self.program) + _limit_faults(step, dest)
+                )
+                if faults:
+                    self.faults.extend(faults)
+                    return False
+                result = sum_range(step, self.ranges).result
+                if dest.name in self.proved:
+                    result = self.known[dest.name]
+                elif result not in self.known[dest.name]:
+                    self.may_overflow.add(dest.name)
+                    result = self.known[dest.name]
+            else:
+                if dest.bits != self.words[step.source].bits:
+                    self.faults.append(f"{step.source} and {dest.name} differ in width")
+                result = self.ranges[step.source]
+            if isinstance(step, Sum) and step.residue is not None:
+                residue = self.words[step.residue]
+                dropped = Interval(*residue_limits(step.right_shift, step.rounding))
+                self.ranges[residue.name] = self.known[residue.name] if residue.role is Role.STATE else dropped
+            # A state read later in the same sample may hold the new value, in the next one the old: keep its word.
+            self.ranges[dest.name] = self.known[dest.name] if dest.role is Role.STATE else result
+        return True
+
+    def _names(self, step: Step) -> bool:
+        """Whether the step reads and writes what it may."""
         sources = [term.word for term in step.terms] if isinstance(step, Sum) else [step.source]
         dests = _dests(step)
-        missing = [name for name in (*sources, *dests) if name not in known]
-        unwritten = [name for name in sources if name in known and name not in ranges]
-        found += [f"the step that writes {step.dest} uses the unknown word {name}" for name in missing]
-        found += [f"the step that writes {step.dest} reads {name} before it is written" for name in unwritten]
+        missing = [name for name in (*sources, *dests) if name not in self.known]
+        unwritten = [name for name in sources if name in self.known and name not in self.ranges]
+        self.faults.extend(f"the step that writes {step.dest} uses the unknown word {name}" for name in missing)
+        self.faults.extend(f"the step that writes {step.dest} reads {name} before it is written" for name in unwritten)
         if missing or unwritten:
-            break
-        dest = program.word(step.dest)
+            return False
         for name in dests:
-            role = program.word(name).role
+            role = self.words[name].role
             if role is Role.INPUT:
-                found.append(f"the input {name} is written")
-            if role is not Role.STATE and name in written:
-                found.append(f"{name} is written twice")
-            written.add(name)
-        if isinstance(step, Sum):
-            faults = _sum_faults(step, ranges) + _residue_faults(step, program)
-            if faults:
-                found += faults
-                break
-            result = sum_range(step, ranges).result
-            if dest.name in proved:
-                result = known[dest.name]
-            elif result not in known[dest.name]:
-                may_overflow.add(dest.name)
-                result = known[dest.name]
-        else:
-            if dest.bits != program.word(step.source).bits:
-                found.append(f"{step.source} and {dest.name} differ in width")
-            result = ranges[step.source]
-        if isinstance(step, Sum) and step.residue is not None:
-            residue = program.word(step.residue)
-            dropped = Interval(*residue_limits(step.right_shift, step.rounding))
-            ranges[residue.name] = known[residue.name] if residue.role is Role.STATE else dropped
-        # A state read later in the same sample may hold the new value, in the next one the old: keep the whole word.
-        ranges[dest.name] = known[dest.name] if dest.role is Role.STATE else result
-    else:
-        if program.output not in written:
-            found.append(f"the output {program.output} is never written")
-    return Analysis(tuple(found), frozenset(may_overflow), proved)
+                self.faults.append(f"the input {name} is written")
+            if role is not Role.STATE and name in self.written:
+                self.faults.append(f"{name} is written twice")
+            self.written.add(name)
+        return True
 
 
 def require_valid(program: Program) -> Analysis:
@@ -169,9 +207,12 @@ def _word_faults(program: Program) -> tuple[str, ...]:
     if roles.get(program.output) is not Role.OUTPUT:
         found.append(f"the output {program.output} is not an output word")
     computed = {step.dest for step in program.steps if isinstance(step, Sum)}
+    written = [name for step in program.steps for name in _dests(step)]
     for entry in program.proof.ranges if program.proof else ():
         if entry.word not in computed or entry.word not in roles:
             found.append(f"the proof speaks of {entry.word}, which no sum writes")
+        elif written.count(entry.word) > 1:
+            found.append(f"the proof speaks of {entry.word}, which more than one step writes")
         elif Interval(entry.lowest, entry.highest) not in Interval.of_word(program.word(entry.word).bits):
             found.append(f"the range proved of {entry.word} is wider than the word")
         elif not entry.lowest <= 0 <= entry.highest:
@@ -219,6 +260,14 @@ def _sum_faults(step: Sum, ranges: dict[str, Interval]) -> list[str]:
     if magnitude > (1 << (step.accumulator_bits - 1)) - 1:
         found.append(f"a partial sum of {step.dest} can reach {magnitude}, more than {step.accumulator_bits} bits hold")
     return found
+
+
+def _limit_faults(step: Sum, dest: Word) -> list[str]:
+    if step.limits is None or (
+        step.limits[0] < step.limits[1] and Interval(*step.limits) in Interval.of_word(dest.bits)
+    ):
+        return []
+    return [f"the clamp of {step.dest} from {step.limits[0]} to {step.limits[1]} is no range of its word"]
 
 
 def _residue_faults(step: Sum, program: Program) -> list[str]:

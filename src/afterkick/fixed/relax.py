@@ -1,4 +1,4 @@
-"""What a proof of the word ranges saves: idle saturation, wide accumulators, and the cost of error feedback.
+"""What a proof of the word ranges saves: idle saturation, wide sums, and the cost of error feedback.
 
 Saturation.  A word that can't overflow needs no check.  The proved ranges become part of the program: the analysis of
 its sums builds on them, the C leaves the checks out, and the simulator refuses a run that contradicts them.
@@ -9,10 +9,13 @@ Error feedback.  What a sum S dropped is S - 2^q y, as long as y is not saturate
 sample, S itself is kept and carried over, and 2^q is taken from the coefficient of that y: the same integers, without
 cutting the residue out.  With saturation the excess would be carried too, and grow without limit: hence the proof.
 In 64 bits a sum costs as much to keep as its residue to cut out, so there it stays.
+
+The price: for inputs beyond the promised peak, or from a state that no run reaches, a sum may overflow.
 """
 
 from collections.abc import Iterable, Iterator
-from math import ceil, floor
+from functools import cached_property
+from math import ceil, floor, isfinite
 
 from attrs import evolve, frozen
 
@@ -32,9 +35,10 @@ from afterkick.fixed.program import (
     dependencies,
     with_accumulator,
 )
-from afterkick.fixed.ranges import Interval, analyse
+from afterkick.fixed.ranges import Interval, analyse, require_valid
+from afterkick.fixed.remedies import scale_remedies
 
-__all__ = ["relax"]
+__all__ = ["Relaxation", "relax"]
 
 NARROW = 32
 LONGEST_CARRY = 2
@@ -47,13 +51,18 @@ def relax(program: Program, ranges: tuple[WordRange, ...]) -> Program:
     """``program`` without the saturation and the width that ``ranges`` prove idle, its error feedback folded away.
 
     ``ranges`` are :attr:`WorstCase.ranges <afterkick.fixed.bounds.WorstCase.ranges>` of this program.  A word is proved
-    where it fits and every word that has an influence on it does.  The result gives the same outputs, integer for
-    integer, for all inputs within the promised peak; others are not accepted any more.  A sum whose error feedback
-    can't be folded, because the sum needs 64 bits or the carried one would not fit 32, keeps it as it is.  A program
-    that has nothing to save is returned as it is.
+    where neither it nor any word that has an influence on it can overflow, by these or by interval arithmetic.  The
+    result gives the same outputs, integer for integer, for all inputs within the promised peak; others are not accepted
+    any more.  A sum whose error feedback can't be folded, because the sum needs 64 bits or the carried one would not
+    fit 32, keeps it as it is.  A program that has nothing to save is returned as it is, and so is one with a preset,
+    which starts from other states than a reset.  See :class:`Relaxation` for what was saved.
 
-    :raises Refused: where nothing is saved because words may overflow, naming them.
+    :raises Refused: where nothing is saved because words may overflow, naming them and the key ``arithmetic.relax``;
+        for a program that is not valid.
     """
+    may_overflow = require_valid(program).may_overflow
+    if program.preset is not None:
+        return program
     proved = _proved_ranges(program, ranges)
     found = _in_narrow_sums(_in_narrow_words(_with_proof(program, proved)))
     for step in [step for step in found.steps if isinstance(step, Sum) and step.residue and step.dest in proved]:
@@ -62,27 +71,88 @@ def relax(program: Program, ranges: tuple[WordRange, ...]) -> Program:
             if not analyse(candidate).faults:
                 found, proved = candidate, proved | fold.ranges
                 break
-    if analyse(program).may_overflow != analyse(found).may_overflow or found.sections != program.sections:
+    if may_overflow != analyse(found).may_overflow or found.sections != program.sections:
         return found
-    problems = [
-        Problem(
-            f"program {program.name}",
-            f"nothing can be relaxed: {entry.word} may reach {entry.lowest:.0f} to {entry.highest:.0f}",
-            f"{entry.capacity_low} to {entry.capacity_high}",
-            "a smaller promised peak, a larger output full scale or another scaling; else keep the saturation",
+    overflowing = [entry for entry in ranges if not entry.fits]
+    if overflowing:
+        cures = scale_remedies(overflowing, program)
+        raise Refused(
+            Problem(
+                "arithmetic.relax",
+                f"nothing can be relaxed, as words may overflow: {', '.join(map(_filled, overflowing))}",
+                "words that hold whatever the promised peak brings",
+                "; ".join([*cures, "or relax = false"]) if cures else "relax = false",
+            )
         )
-        for entry in ranges
-        if not entry.fits
-    ]
-    if problems:
-        raise Refused(problems)
     return program
+
+
+def _filled(entry: WordRange) -> str:
+    extent = f"up to {100 * entry.filling:.6g} % of it" if isfinite(entry.filling) else "without limit"
+    return f"{entry.word} ({extent})"
+
+
+@frozen(eq=False)
+class Relaxation:
+    """A program before and after :func:`relax`: what was saved, and what had to stay."""
+
+    before: Program
+    after: Program
+
+    @cached_property
+    def unchecked(self) -> tuple[str, ...]:
+        """Words that may overflow by what their type holds, and are proved not to."""
+        left = analyse(self.after).may_overflow
+        doubted = analyse(self.before).may_overflow - left
+        return tuple(word.name for word in self.before.words if word.name in doubted)
+
+    @cached_property
+    def checked(self) -> tuple[str, ...]:
+        """Words that keep their overflow rule, as they are not proved."""
+        doubted = analyse(self.after).may_overflow
+        return tuple(word.name for word in self.after.words if word.name in doubted)
+
+    @cached_property
+    def narrowed(self) -> tuple[str, ...]:
+        """Words whose sums take 32 bits instead of 64."""
+        return tuple(name for name in _wide(self.before) if name not in self.wide)
+
+    @cached_property
+    def shortened(self) -> tuple[str, ...]:
+        """Words of 32 bits that had more."""
+        bits = {word.name: word.bits for word in self.after.words}
+        return tuple(word.name for word in self.before.words if word.bits > bits.get(word.name, word.bits))
+
+    @cached_property
+    def wide(self) -> tuple[str, ...]:
+        """Words whose sums still take 64 bits."""
+        return _wide(self.after)
+
+    @cached_property
+    def folded(self) -> tuple[str, ...]:
+        """Words whose error feedback is in a coefficient now."""
+        return tuple(name for name in _fed_back(self.before) if name not in _fed_back(self.after))
+
+    @cached_property
+    def carried(self) -> tuple[str, ...]:
+        """Words whose error feedback could not be folded."""
+        return _fed_back(self.after)
+
+
+def _wide(program: Program) -> tuple[str, ...]:
+    return tuple(step.dest for step in program.steps if isinstance(step, Sum) and step.accumulator_bits > NARROW)
+
+
+def _fed_back(program: Program) -> tuple[str, ...]:
+    return tuple(step.dest for step in program.steps if isinstance(step, Sum) and step.residue is not None)
 
 
 def _proved_ranges(program: Program, ranges: tuple[WordRange, ...]) -> Ranges:
     computed = [step.dest for step in program.steps if isinstance(step, Sum)]
+    # What a clamp holds back does not respond as the ranges of the words behind it take it to.
+    clamped = {step.dest for step in program.steps if isinstance(step, Sum) and step.limits is not None}
     fitting = {entry.word: Interval(ceil(entry.lowest), floor(entry.highest)) for entry in ranges if entry.fits}
-    doubtful = set(computed) - set(fitting)
+    doubtful = clamped | set(computed) - set(fitting)
     return {name: fitting[name] for name in computed if not doubtful & dependencies(program, [name])}
 
 
@@ -99,7 +169,8 @@ def _in_narrow_words(program: Program) -> Program:
         return evolve(word, bits=NARROW) if word.bits > NARROW and ranges.get(word.name) in narrow else word
 
     sections = (evolve(section, words=tuple(map(fitted, section.words))) for section in program.sections)
-    return evolve(program, sections=tuple(sections))
+    candidate = evolve(program, sections=tuple(sections))
+    return program if analyse(candidate).faults else candidate
 
 
 def _in_narrow_sums(program: Program) -> Program:

@@ -12,11 +12,11 @@ from attrs import frozen
 from numpy.typing import NDArray
 
 from afterkick.errors import Problem, Refused
-from afterkick.fixed.narrow import fit, shift_right
+from afterkick.fixed.narrow import clamp, fit, shift_right
 from afterkick.fixed.program import Program, Role, Sum
 from afterkick.fixed.ranges import Analysis, Interval, analyse
 
-__all__ = ["Trace", "simulate", "trace"]
+__all__ = ["Trace", "preset_state", "simulate", "trace"]
 
 FEW_STIMULI = 8
 """So many columns are still faster one by one."""
@@ -70,6 +70,32 @@ def trace(
     return Trace(np.ascontiguousarray(outputs.reshape(codes.shape)), final, machine.overflows())
 
 
+def preset_state(program: Program, code: int, wanted: int) -> dict[str, int]:
+    """The states that the program's preset gives for an input code and a wanted output code; the others are zero.
+
+    :raises Refused: for a program without a preset, or codes that their words don't hold.
+    """
+    preset = program.preset
+    if preset is None:
+        raise Refused(Problem("program", "no preset", "a filter that integrates, in the parallel structure"))
+    for name, value in ((program.input, code), (preset.wanted, wanted)):
+        limits = Interval.of_word(program.word(program.input).bits)
+        if not limits.lowest <= value <= limits.highest:
+            raise Refused(Problem(name, str(value), f"{limits.lowest} to {limits.highest}", "clip the code"))
+    words = {word.name: 0 for word in program.words if word.role is Role.STATE}
+    given = {program.input: code, preset.wanted: wanted}
+    for step in preset.steps:
+        if isinstance(step, Sum):
+            total = sum(term.factor * (given | words)[term.word] for term in step.terms)
+            total = shift_right(total, step.right_shift, step.rounding)
+            if step.limits is not None:
+                total = clamp(total, step.limits)
+            words[step.dest] = fit(total, program.word(step.dest).bits, step.overflow)
+        else:
+            words[step.dest] = (given | words)[step.source]
+    return words
+
+
 def _checked(inputs: NDArray[np.integer[Any]] | Sequence[int], limits: Interval) -> NDArray[np.int64]:
     codes = np.asarray(inputs)
     accepted = f"integers from {limits.lowest} to {limits.highest}, of shape (n,) or (n, m)"
@@ -120,11 +146,12 @@ class _Machine:
         (first, first_word), rest = factors[0], factors[1:]
         dest, name = self.index[step.dest], step.dest
         residue = None if step.residue is None else self.index[step.residue]
-        bits, right_shift, rounding, overflow = (
+        bits, right_shift, rounding, overflow, limits = (
             program.word(step.dest).bits,
             step.right_shift,
             step.rounding,
             step.overflow,
+            step.limits,
         )
         counts = self.counts
 
@@ -135,6 +162,8 @@ class _Machine:
             exact, total = total, shift_right(total, right_shift, rounding)
             if residue is not None:
                 words[residue] = exact - (total << right_shift)
+            if limits is not None:
+                total = clamp(total, limits)
             if may_overflow:
                 stored = fit(total, bits, overflow)
                 changed = stored != total

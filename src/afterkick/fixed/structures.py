@@ -7,7 +7,7 @@ count of any real core:
     multiply                      1, in a 64-bit accumulator 2, a word of more than 32 bits 4
     add a term                    1, in a 64-bit accumulator 2
     shift right and round         2, in a 64-bit accumulator 4
-    saturate or wrap              2, in a 64-bit accumulator 4, where it is not proved that it never acts
+    saturate, wrap or clamp       2, in a 64-bit accumulator 4, where it is not proved that it never acts
 
 A factor that is a power of two is no multiplication; neither is the first term of a sum an addition.
 """
@@ -18,6 +18,7 @@ from typing import TYPE_CHECKING, Protocol
 from attrs import evolve, frozen
 
 from afterkick.errors import Problem, Refused
+from afterkick.fixed.bounds import WorstCase
 from afterkick.fixed.carry import WIDEST_ACCUMULATOR, with_carry
 from afterkick.fixed.coupled import coupled_program
 from afterkick.fixed.delta import delta_program
@@ -25,6 +26,7 @@ from afterkick.fixed.direct import direct_program
 from afterkick.fixed.parallel import parallel_program
 from afterkick.fixed.program import Program, Role, Sum
 from afterkick.fixed.ranges import analyse
+from afterkick.fixed.relax import Relaxation, relax
 from afterkick.fixed.transposed import transposed_program
 
 if TYPE_CHECKING:
@@ -38,6 +40,7 @@ CARRIES = (0, 1, 2)
 """Orders of error feedback that are tried."""
 CARRIED = ("direct", "transposed")
 """The structures that round so coarsely that it matters."""
+INTEGRATING = "parallel"
 
 Judge = Callable[[Program], Sequence[str]]
 """What a program falls short of, in words; nothing where it is good enough."""
@@ -69,6 +72,8 @@ class Candidate:
     refused: tuple[Problem, ...] = ()
     falls_short: tuple[str, ...] | None = None
     """What the judge said; None where it was not asked, as a cheaper one was good enough."""
+    relaxation: Relaxation | None = None
+    """How the program was relaxed; None where it was not to be."""
 
     @property
     def operations(self) -> int | None:
@@ -91,12 +96,10 @@ def build_program(
     digest: str = "",
     judge: Judge | None = None,
 ) -> Program:
-    """The integer filter in the structure that ``arithmetic`` names; for "auto" see :func:`candidates`.
+    """The integer filter in the structure that ``arithmetic`` names, for "auto" the best of :func:`candidates`.
 
     :raises Refused: what the structure can't do, or for "auto" no structure can.
     """
-    if arithmetic.structure != "auto":
-        return BUILDERS[arithmetic.structure](sampled, arithmetic, signals, name, title=title, digest=digest)
     return chosen(candidates(sampled, arithmetic, signals, name, title=title, digest=digest, judge=judge))
 
 
@@ -110,22 +113,39 @@ def candidates(
     digest: str = "",
     judge: Judge | None = None,
 ) -> tuple[Candidate, ...]:
-    """Every structure, the cheapest first and the refused ones last, judged up to the first that is good enough.
+    """For "auto" every structure, the cheapest first and the refused ones last; else the one that is named.
 
-    The direct and the transposed structure come with and without error feedback, unless ``arithmetic`` asks for it.
-    Without a ``judge`` every program is good enough.
+    They are judged up to the first that is good enough; without a ``judge`` every program is.  Of a filter that
+    integrates the parallel structure comes first: it alone keeps apart and clamps what integrates.  The direct and the
+    transposed structure come with and without error feedback, unless ``arithmetic`` asks for it.
+
+    :raises Refused: what the structure that is named can't do.
     """
+
+    def built(structure: str) -> Program:
+        one = evolve(arithmetic, structure=structure)
+        return BUILDERS[structure](sampled, one, signals, name, title=title, digest=digest)
+
+    if arithmetic.structure != "auto":
+        named = Candidate(arithmetic.structure, arithmetic.carry, built(arithmetic.structure))
+        return (_relaxed(named) if arithmetic.relax else named,)
     found: list[Candidate] = []
-    for structure, build in BUILDERS.items():
+    for structure in BUILDERS:
         try:
-            base = build(sampled, evolve(arithmetic, structure=structure), signals, name, title=title, digest=digest)
+            base = built(structure)
         except Refused as refusal:
             found.append(Candidate(structure, arithmetic.carry, None, refusal.problems))
             continue
         found.append(Candidate(structure, arithmetic.carry, base))
         if structure in CARRIED and not arithmetic.carry:
             found += _carried(base, arithmetic.accumulator_bits or WIDEST_ACCUMULATOR)
-    made = sorted((one for one in found if one.operations is not None), key=lambda one: one.operations or 0)
+    if arithmetic.relax:
+        found = [_relaxed(one) for one in found]
+    integrates = sampled.marginal and any(pole.at_one() for pole in sampled.transfer().poles)
+    made = sorted(
+        (one for one in found if one.operations is not None),
+        key=lambda one: (integrates and one.structure != INTEGRATING, one.operations or 0),
+    )
     judged: list[Candidate] = []
     for one in made:
         if one.program is not None and not any(cheaper.good_enough for cheaper in judged):
@@ -147,6 +167,16 @@ def _carried(base: Program, widest: int) -> list[Candidate]:
     return found
 
 
+def _relaxed(one: Candidate) -> Candidate:
+    if one.program is None:
+        return one
+    try:
+        program = relax(one.program, WorstCase(one.program).ranges)
+    except Refused as refusal:
+        return evolve(one, program=None, refused=refusal.problems)
+    return evolve(one, program=program, relaxation=Relaxation(one.program, program))
+
+
 def chosen(listed: Sequence[Candidate]) -> Program:
     """The first that is good enough; where none is, the one that falls short of the least, of equals the cheapest.
 
@@ -155,7 +185,7 @@ def chosen(listed: Sequence[Candidate]) -> Program:
     made = [(one, one.program) for one in listed if one.program is not None]
     if not made:
         raise Refused(
-            evolve(problem, found=f'structure "{one.structure}": {problem.found}')
+            problem if len(listed) == 1 else evolve(problem, found=f'structure "{one.structure}": {problem.found}')
             for one in listed
             for problem in one.refused
         )
@@ -179,7 +209,8 @@ def operations(program: Program) -> int:
             total += halves + (per_sum if i else 0)
             if abs(term.factor) & (abs(term.factor) - 1):
                 total += 2 * per_sum if halves == 2 else per_sum
-        total += 2 * per_sum * (bool(step.right_shift) + (step.dest in may_overflow)) + _halves(program, step.dest)
+        held = step.dest in may_overflow or step.limits is not None
+        total += 2 * per_sum * (bool(step.right_shift) + held) + _halves(program, step.dest)
         if step.residue is not None:
             total += per_sum + _halves(program, step.residue)
     return total

@@ -6,7 +6,7 @@ together stay below a quarter of an output count.
 """
 
 import math
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from fractions import Fraction
 from typing import TYPE_CHECKING
 
@@ -42,6 +42,7 @@ __all__ = [
     "over_power_of_two",
     "rounded",
     "simplest",
+    "weighed_sum",
     "wide_cascade",
 ]
 
@@ -154,6 +155,8 @@ class Frame:
     """Those behind it, up to the first without a norm."""
     roundings: int
     """An upper bound of how many states and wide outputs there are."""
+    limits: tuple[int, int] | None = None
+    """What an output that integrates is held within, in last places of the data word; None: its word limits it."""
 
     def fraction_bits(self, errors: Sequence[FloatSection | int]) -> tuple[int, ...]:
         """Of each state: with these all roundings together add less than a quarter of the output's last place.
@@ -234,6 +237,31 @@ Weighed = tuple[Scaled, str, str]
 """A factor, the word it multiplies, and a label."""
 
 
+def weighed_sum(
+    builder: Builder,
+    dest: str,
+    weighed: Sequence[Weighed],
+    fractions: Mapping[str, int],
+    ranges: dict[str, Interval],
+    fraction_bits: int,
+) -> Sum | None:
+    """The sum at the finest binary point of its terms, rounded to ``fraction_bits``; None where it fits no accumulator.
+
+    ``fractions`` and ``ranges`` are those of the words.
+    """
+    listed = [term for term in weighed if term[0].integer]
+    points = [factor.fraction_bits + fractions[word] for factor, word, _ in listed]
+    scale = max([fraction_bits, *points])
+    terms = tuple(
+        Term(factor.integer, word, scale - point, label)
+        for (factor, word, label), point in zip(listed, points, strict=True)
+    )
+    width = builder.width(terms, ranges, scale - fraction_bits)
+    if width is None or scale - fraction_bits > width - 2:
+        return None
+    return Sum(dest, terms, width, scale - fraction_bits, builder.rounding, builder.overflow)
+
+
 class Sheet:
     """Words and steps in the making, with the range of each word."""
 
@@ -249,33 +277,32 @@ class Sheet:
 
     def temporary(self, dest: str, weighed: Sequence[Weighed], fraction_bits: int) -> bool:
         """A sum as wide as it gets, rounded to so many fraction bits; False where no accumulator holds it."""
-        listed = [term for term in weighed if term[0].integer]
-        points = [factor.fraction_bits + self.fractions[word] for factor, word, _ in listed]
-        scale = max([fraction_bits, *points])
-        terms = tuple(
-            Term(factor.integer, word, scale - point, label)
-            for (factor, word, label), point in zip(listed, points, strict=True)
-        )
-        places = scale - fraction_bits
-        width = self.frame.builder.width(terms, self.ranges, places)
-        if width is None or places > width - 2:
+        step = weighed_sum(self.frame.builder, dest, weighed, self.fractions, self.ranges, fraction_bits)
+        if step is None:
             return False
-        builder = self.frame.builder
-        step = Sum(dest, terms, width, places, builder.rounding, builder.overflow)
         self.ranges[dest], self.fractions[dest] = sum_range(step, self.ranges).result, fraction_bits
         self.words.append(Word(dest, bits_of(self.ranges[dest]), self.frame.place + fraction_bits, Role.TEMPORARY))
         self.sums.append(step)
         return True
 
-    def state(self, dest: str, terms: tuple[str, ...]) -> bool:
-        """The plain sum of words of the state's own binary point; False where no accumulator holds it."""
+    def state(self, dest: str, terms: tuple[str, ...], limits: tuple[int, int] | None = None) -> bool:
+        """The plain sum of words of the state's own binary point; False where no accumulator holds it.
+
+        ``limits`` are in last places of the data word.
+        """
         builder = self.frame.builder
         listed = tuple(Term(1, name) for name in terms)
         width = builder.width(listed, self.ranges, 0)
         if width is None:
             return False
-        self.sums.append(Sum(dest, listed, width, 0, builder.rounding, builder.overflow))
+        places = self.fractions[dest]
+        held = None if limits is None else (limits[0] << places, limits[1] << places)
+        self.sums.append(Sum(dest, listed, width, 0, builder.rounding, builder.overflow, limits=held))
         return True
+
+    def steady(self, dest: str, weighed: Sequence[Weighed]) -> Sum | None:
+        """The sum that gives a state the value it rests at; None where no accumulator holds it."""
+        return weighed_sum(self.frame.builder, dest, weighed, self.fractions, self.ranges, self.fractions[dest])
 
 
 @frozen
@@ -296,6 +323,9 @@ class Core:
     a: Triple
     a_bits: int
     coefficients: tuple[Coefficient, ...] = field(repr=False)
+    steady: tuple[Sum, ...] | None = None
+    """What gives the states the values they rest at with a constant source, but for an output that integrates; None
+    where that is not known."""
 
 
 def wide_cascade(
@@ -347,7 +377,7 @@ def wide_cascade(
             continue
         wide = next(word for word in core.words if word.name == core.wide)
         if last:
-            word, after = Word("y", builder.data_bits, frame.place, Role.OUTPUT), [output_sum(builder, (core,), None)]
+            word, after = Word("y", builder.data_bits, frame.place, Role.OUTPUT), [output_sum(builder, (core,))]
         elif wide.role is Role.TEMPORARY and core.fraction_bits <= handed_on:
             word, after = wide, []
         else:
@@ -377,19 +407,15 @@ def wide_cascade(
     return tuple(wired)
 
 
-def output_sum(builder: Builder, cores: Sequence[Core], direct: tuple[Scaled, str] | None) -> Sum:
-    """The output word: wide outputs and the direct part added up and rounded."""
+def output_sum(
+    builder: Builder, cores: Sequence[Core], taps: Sequence[Weighed] = (), limits: tuple[int, int] | None = None
+) -> Sum:
+    """The output word: wide outputs and what the taps take of data words, added up, rounded, and held within limits."""
     ranges = {core.wide: Interval.of_word(core.bits) for core in cores}
-    points = [core.fraction_bits for core in cores]
-    if direct is not None:
-        ranges[direct[1]] = Interval.of_word(builder.data_bits)
-        points.append(direct[0].fraction_bits)
-    scale = max([0, *points])
-    terms = [Term(1, core.wide, scale - core.fraction_bits) for core in cores]
-    if direct is not None and direct[0].integer:
-        terms.append(Term(direct[0].integer, direct[1], scale - direct[0].fraction_bits, "direct"))
-    width = builder.width(tuple(terms), ranges, scale)
-    if width is None or scale > width - 2:
+    ranges |= {word: Interval.of_word(builder.data_bits) for _, word, _ in taps}
+    fractions = {core.wide: core.fraction_bits for core in cores} | {word: 0 for _, word, _ in taps}
+    step = weighed_sum(builder, "y", [*((ONE, core.wide, "") for core in cores), *taps], fractions, ranges, 0)
+    if step is None:
         raise Refused(
             Problem(
                 "arithmetic",
@@ -398,4 +424,4 @@ def output_sum(builder: Builder, cores: Sequence[Core], direct: tuple[Scaled, st
                 "accumulator_bits = 64, narrower states, or a larger output full scale",
             )
         )
-    return Sum("y", tuple(terms), width, scale, builder.rounding, builder.overflow)
+    return evolve(step, limits=limits)

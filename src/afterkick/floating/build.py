@@ -110,7 +110,8 @@ def _flush_problems(flush_below: fmpq | None) -> list[Problem]:
     if flush_below is None or fmpq(2) ** SMALLEST_EXPONENT <= flush_below < 1:
         return []
     found = f"about {mid_float(arb(flush_below)):.3g}"
-    return [Problem("flush_below", found, f"from 2^{SMALLEST_EXPONENT} to below 1", "1e-30 is far below any signal")]
+    accepted = f"from 2^{SMALLEST_EXPONENT} to below 1"
+    return [Problem("arithmetic.flush_below", found, accepted, "1e-30 is far below any signal")]
 
 
 def _threshold(flush_below: fmpq) -> float:

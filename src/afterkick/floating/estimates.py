@@ -95,6 +95,9 @@ class FloatEstimates:
     """Of the stored coefficients, exact, in output units per input unit; None with a pole at z = 1."""
     dc_gain_relative: float | None
     """Its error against the exact sampled filter; None where either has no gain, or zero, at z = 1."""
+    output_peak: float | None
+    """Bound, in output units: the largest output for any input within the promised peak, roundings left out; None where
+    it has no limit."""
     coefficient_error: float | None
     """Bound, in output units: the stored coefficients against the exact sampled filter, for every input within the
     promised peak, roundings left out; None where no bound exists."""
@@ -123,6 +126,7 @@ def float_estimates(program: FloatProgram, sampled: Sampled) -> FloatEstimates:
     return FloatEstimates(
         dc_gain,
         _dc_gain_relative(dc_gain, sampled),
+        _largest_sum(response, program.input_format.peak) if response.bounded else None,
         _coefficient_error(response, sampled, program.input_format.peak),
         _flush_error(program, kicks),
         sines.largest if response.bounded else None,
@@ -169,8 +173,12 @@ def _coefficient_error(response: ModalResponse, sampled: Sampled, peak: fmpq) ->
     """Peak times the absolute sum of the difference of the two pulse responses: it is attained, or nearly."""
     if not sampled.stable or not response.bounded:
         return None
-    total = absolute_sum(difference(response, exact_response(sampled, fmpq(1)))).upper
-    return _up(total * _up(float(fraction(peak))))
+    return _largest_sum(difference(response, exact_response(sampled, fmpq(1))), peak)
+
+
+def _largest_sum(response: ModalResponse, peak: fmpq) -> float:
+    """Peak times the absolute sum of a pulse response, rounded up."""
+    return _up(absolute_sum(response).upper * _up(float(fraction(peak))))
 
 
 def _up(value: float) -> float:

@@ -114,6 +114,11 @@ class FloatProgramSection:
         a0, a1, a2 = (_rational(value) for value in self.a)
         return a0, a1, a2
 
+    @property
+    def a_at_one(self) -> fmpq:
+        """1 + a1 + a2, exactly."""
+        return sum(self.exact_a, fmpq(0))
+
 
 @frozen
 class FloatProgram:
@@ -157,7 +162,7 @@ def float_dc_gain(program: FloatProgram) -> fmpq | None:
     """The exact DC gain of the stored coefficients, in output units per input unit; None with a pole at z = 1."""
     gain = fmpq(1)
     for section in program.sections:
-        denominator = sum(section.exact_a, fmpq(0))
+        denominator = section.a_at_one
         if denominator == 0:
             return None
         gain *= sum(section.exact_b, fmpq(0)) / denominator

@@ -8,16 +8,17 @@ from flint import arb
 
 from afterkick.design.schema import Design
 from afterkick.errors import Uncertified
-from afterkick.fixed.program import Program
 from afterkick.model.model import Model
 from afterkick.model.roots import Roots
 from afterkick.numbers import fraction, mid_float, nearest_float, to_text, working_bits
 from afterkick.report.formulas import closed_form
 from afterkick.report.proofs import proof_data
+from afterkick.report.relaxation import relaxation_data
 from afterkick.report.response import Kick
+from afterkick.report.settling import settled_data
 from afterkick.sampling.response_errors import CONVENTION, ResponseErrors
 from afterkick.sampling.sampled import Sampled
-from afterkick.verdict import Assessment
+from afterkick.verdict import Assessment, FixedPoint, SinglePrecision
 
 __all__ = ["REPORT_BITS", "check_data", "kick_data"]
 
@@ -37,8 +38,7 @@ def check_data(found: Assessment) -> dict[str, Any]:
         "model": _model_data(found.model),
         "sampling": _sampling_data(found.sampled),
         "errors": _errors_data(found.errors),
-        "fixed": _fixed_data(found),
-        "bounds": proof_data(found.bounds),
+        **_realisation_data(found),
         "budget": [
             {"item": line.item, "limit": line.limit, "found": line.found, "holds": line.holds, "remark": line.remark}
             for line in found.budget
@@ -135,8 +135,21 @@ def _errors_data(errors: ResponseErrors) -> dict[str, Any]:
     return {"convention": CONVENTION, "kind": "estimate", **asdict(errors)}
 
 
-def _fixed_data(found: Assessment) -> dict[str, Any]:
-    program: Program = found.program
+def _realisation_data(found: Assessment) -> dict[str, Any]:
+    """``fixed`` and ``bounds``, or ``float32``."""
+    errors = _errors_data(found.shipped)
+    match found.realisation:
+        case FixedPoint() as fixed:
+            proved = proof_data(fixed.bounds) | {"settled": settled_data(fixed.settled)}
+            return {"fixed": _fixed_data(fixed) | {"errors": errors}, "bounds": proved}
+        case SinglePrecision() as single:
+            from afterkick.report.single import single_data  # fixed point pays nothing for it
+
+            return {"float32": single_data(single) | {"errors": errors}}
+
+
+def _fixed_data(found: FixedPoint) -> dict[str, Any]:
+    program = found.program
     return {
         "kind": "fixed",
         "structure": program.structure,
@@ -167,6 +180,7 @@ def _fixed_data(found: Assessment) -> dict[str, Any]:
             }
             for one in found.tried
         ],
+        "relaxed": None if found.relaxation is None else relaxation_data(found.relaxation),
         "choice": None
         if found.choice is None
         else {
@@ -176,14 +190,14 @@ def _fixed_data(found: Assessment) -> dict[str, Any]:
         },
         "dc_gain": None if found.dc_gain is None else nearest_float(found.dc_gain),
         "dc_gain_exact": None if found.dc_gain is None else str(fraction(found.dc_gain)),
-        "errors": _errors_data(found.shipped),
     }
 
 
 def kick_data(design: Design, rows: Kick) -> dict[str, Any]:
     """The columns of ``kick`` as rows."""
-    columns = (rows.n.tolist(), rows.t.tolist(), rows.analytic.tolist(), rows.sampled.tolist(), rows.integer.tolist())
-    names = ("n", "t", "analytic", "sampled", "integer", "counts")
+    single = design.arithmetic.kind == "float32"
+    names = ("n", "t", "analytic", "sampled", *(("float32", "output") if single else ("integer", "counts")))
+    columns = (rows.n, rows.t, rows.analytic, rows.sampled, rows.shipped, rows.outputs)
     data = {
         "design": design.design.name,
         "rate_hz": float(fraction(design.sampling.rate_hz)),
@@ -191,8 +205,7 @@ def kick_data(design: Design, rows: Kick) -> dict[str, Any]:
         "convention": CONVENTION,
         "dirac": rows.dirac,
         "improper": rows.improper,
-        "clipped": rows.clipped,
-        "amplitude_counts": rows.amplitude_counts,
-        "rows": [dict(zip(names, row, strict=True)) for row in zip(*columns, rows.counts.tolist(), strict=True)],
+        **({"amplitude": rows.amplitude} if single else {"clipped": rows.clipped, "amplitude_counts": rows.amplitude}),
+        "rows": [dict(zip(names, row, strict=True)) for row in zip(*(c.tolist() for c in columns), strict=True)],
     }
     return {key: _finite(value) for key, value in data.items()}

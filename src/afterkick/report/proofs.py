@@ -3,15 +3,13 @@
 from math import isfinite
 from typing import Any
 
-from afterkick.fixed.bounds import Bounds
+from afterkick.fixed.bounds import Bounds, Integration
 from afterkick.fixed.program import Program
+from afterkick.fixed.remedies import scale_remedies
 from afterkick.numbers import nearest_float
 from afterkick.report.formulas import counted
 
 __all__ = ["proof_data", "proof_rows"]
-
-ROOM = 1.001
-"""What a remedy leaves for roundings."""
 
 
 def proof_data(bounds: Bounds) -> dict[str, Any]:
@@ -29,6 +27,7 @@ def proof_data(bounds: Bounds) -> dict[str, Any]:
                 "highest": _finite(word.highest),
                 "capacity": [word.capacity_low, word.capacity_high],
                 "fits": word.fits,
+                "clamped": word.clamped,
             }
             for word in bounds.words
         ],
@@ -39,8 +38,17 @@ def proof_data(bounds: Bounds) -> dict[str, Any]:
             "rounding": output.rounding,
             "sampling": output.sampling,
             "total": output.total,
+            "growth_per_sample": output.growth,
         },
         "dead_band_counts": bounds.dead_band,
+        "integration": None
+        if bounds.integration is None
+        else {
+            "word": bounds.integration.word,
+            "held_counts": [bounds.integration.lowest, bounds.integration.highest],
+            "smallest_code": bounds.integration.smallest_code,
+            "counts_per_sample_and_code": bounds.integration.per_sample,
+        },
         "noise_rms_estimate": bounds.noise_rms,
         "peak_reached": None
         if reached is None
@@ -52,18 +60,30 @@ def proof_rows(bounds: Bounds, program: Program) -> list[tuple[str, str]]:
     """(label, text) for the terminal."""
     rows = []
     if bounds.proved:
-        fullest = max(bounds.words, key=lambda word: word.filling)
-        text = f"no word overflows for any input up to {bounds.peak_code} counts; the fullest is {fullest.word}, "
-        rows.append(("bounds", f"{text}{100 * fullest.filling:.4g} % full"))
+        text = f"no word overflows for any input up to {bounds.peak_code} counts"
+        free = [word for word in bounds.words if not word.clamped]
+        if free:
+            fullest = max(free, key=lambda word: word.filling)
+            text += f"; the fullest is {fullest.word}, {100 * fullest.filling:.4g} % full"
+        rows.append(("bounds", text))
+        if bounds.clamped:
+            names = ", ".join(word.word for word in bounds.clamped)
+            rows.append(("  clamp", f"holds {names}; the output is at most {_ends(bounds, program)} counts"))
     else:
         rows.append(("bounds", f"nothing is proved: {bounds.why_not}"))
-        rows += [("", remedy) for remedy in _remedies(bounds, program)]
+        rows += [("", f"remedy: {remedy}") for remedy in scale_remedies(bounds.overflowing, program)]
     if bounds.output is not None:
         out = bounds.output
         parts = f"coefficients {out.coefficients:.4g} + rounding {out.rounding:.4g} + sampling {out.sampling:.4g}"
-        rows.append(("  output", f"off by at most {out.total:.4g} counts = {parts}"))
+        when = "while no clamp acts, " if bounds.clamped else ""
+        rows.append(("  output", f"{when}off by at most {out.total:.4g} counts = {parts}"))
+        if out.growth:
+            rows.append(("", f"and {out.growth:.3g} counts more for each sample that the worst input lasts"))
         rest = counted(int(bounds.dead_band or 0), "count")
-        rows.append(("  at rest", f"within {rest} of 0 long after the input has gone"))
+        what = "0" if bounds.integration is None else "the value that it holds"
+        rows.append(("  at rest", f"within {rest} of {what} long after the input has gone"))
+    if bounds.integration is not None:
+        rows += _integration_rows(bounds.integration, program)
     if bounds.noise_rms is not None:
         rows.append(("  noise", f"{bounds.noise_rms:.3g} counts r.m.s. (estimate)"))
     if bounds.peak_reached is not None:
@@ -73,21 +93,22 @@ def proof_rows(bounds: Bounds, program: Program) -> list[tuple[str, str]]:
     return rows
 
 
-def _remedies(bounds: Bounds, program: Program) -> list[str]:
-    """What would make the proof go through, where that is a matter of scale."""
-    remedies = []
-    for word in bounds.overflowing:
-        if not isfinite(word.filling):
-            continue
-        if word.word == program.output:
-            needed = nearest_float(program.output_format.full_scale) * word.filling * ROOM
-            size = f"{needed:.4g} {program.output_format.unit}".rstrip()
-            remedies.append(f"remedy: an output full_scale of {size} or more, or a smaller peak")
-        elif not remedies:
-            peak = nearest_float(program.input_format.peak) / word.filling / ROOM
-            size = f"{peak:.4g} {program.input_format.unit}".rstrip()
-            remedies.append(f"remedy for {word.word}: promise an input peak of {size} or less")
-    return remedies
+def _ends(bounds: Bounds, program: Program) -> str:
+    output = next(word for word in bounds.words if word.word == program.output)
+    return f"{output.lowest:.0f} to {output.highest:.0f}"
+
+
+def _integration_rows(found: Integration, program: Program) -> list[tuple[str, str]]:
+    """What is lost, and how fast it goes."""
+    code = nearest_float(program.input_format.full_scale) / 2 ** (program.data_bits - 1)
+    unit = program.input_format.unit
+    smallest = f"{counted(found.smallest_code, 'count')} ({found.smallest_code * code:.4g} {unit}".rstrip() + ")"
+    samples = 1 / found.per_sample
+    time_s = samples / nearest_float(program.rate_hz)
+    return [
+        ("  integral", f"the smallest constant input that is not lost is {smallest}"),
+        ("", f"a constant input of 1 count moves the output by 1 count in {samples:.4g} samples, {time_s:.4g} s"),
+    ]
 
 
 def _finite(value: float) -> float | None:

@@ -4,6 +4,7 @@ from collections.abc import Iterable, Mapping, Sequence
 from math import isfinite
 from typing import Any
 
+import numpy as np
 from flint import arb
 
 from afterkick.design.schema import Design
@@ -16,10 +17,12 @@ from afterkick.report.data import REPORT_BITS
 from afterkick.report.formulas import ball_text, closed_form, counted, exact_text, number
 from afterkick.report.layout import LABEL, row
 from afterkick.report.proofs import proof_rows
+from afterkick.report.relaxation import relaxation_rows
 from afterkick.report.response import Kick
+from afterkick.report.settling import settled_rows
 from afterkick.sampling.response_errors import CONVENTION, ResponseErrors
 from afterkick.targets import TargetProfile
-from afterkick.verdict import Assessment, BudgetLine
+from afterkick.verdict import Assessment, BudgetLine, FixedPoint, SinglePrecision
 
 __all__ = ["check_text", "headline", "kick_text", "targets_text", "tour_text"]
 
@@ -51,8 +54,17 @@ def _verdict_text(found: Assessment) -> str:
 def check_text(found: Assessment) -> str:
     """The whole assessment, at most a screen for a design of a few sections."""
     lines = [headline(found), ""]
-    lines += _model_lines(found) + _sampling_lines(found) + _fixed_lines(found) + _error_lines(found)
-    lines += [row(*labelled) for labelled in proof_rows(found.bounds, found.program)]
+    lines += _model_lines(found) + _sampling_lines(found)
+    match found.realisation:
+        case FixedPoint() as fixed:
+            lines += _fixed_lines(fixed) + _error_lines(found)
+            proved = proof_rows(fixed.bounds, fixed.program) + settled_rows(fixed.settled)
+            lines += [row(*labelled) for labelled in proved]
+        case SinglePrecision() as single:
+            from afterkick.report.single import estimate_rows, single_lines  # fixed point pays nothing for it
+
+            lines += single_lines(single) + _error_lines(found)
+            lines += [row(*labelled) for labelled in estimate_rows(single)]
     lines += _budget_lines(found.budget)
     lines += [row("warning", text) for text in (*found.model.warnings, *found.sampled.warnings)]
     return "\n".join(lines)
@@ -124,7 +136,7 @@ def _short(value: arb) -> str:
     return ball_text(value, 9) if whole is None else str(whole)
 
 
-def _fixed_lines(found: Assessment) -> list[str]:
+def _fixed_lines(found: FixedPoint) -> list[str]:
     program = found.program
     rounding = "floor" if program.rounding.value == "floor" else f"round to {program.rounding.value}"
     words = f"{program.data_bits}-bit data, {program.coefficient_bits}-bit coefficients"
@@ -133,6 +145,8 @@ def _fixed_lines(found: Assessment) -> list[str]:
         shown = _integers(section) if program.structure in ("direct", "transposed") else _named(section)
         lines.append(row(f"  section {k}", shown, formula=True))
     lines += [_candidate(one, program) for one in found.tried]
+    if found.relaxation is not None:
+        lines += [row(*labelled) for labelled in relaxation_rows(found.relaxation)]
     choice = found.choice
     if choice is None:
         return lines
@@ -173,9 +187,8 @@ def _integers(section: ProgramSection) -> str:
 
 def _error_lines(found: Assessment) -> list[str]:
     exact, shipped = found.errors, found.shipped
-    counts = 2 ** (found.program.data_bits - 1)
-    peak = nearest_float(found.program.input_format.peak / found.program.output_format.full_scale * counts)
-    lines = [row("errors", f"{'':<40}{'sampled exactly':>20}{'with the integers':>22}")]
+    column, peak, unit = _staircase_scale(found)
+    lines = [row("errors", f"{'':<40}{'sampled exactly':>20}{column:>22}")]
 
     def add(label: str, pick: str, values: Iterable[float | None], unit: str, absent: str = "none") -> None:
         texts = [absent if value is None or not isfinite(value) else _figure(value, unit) for value in values]
@@ -199,7 +212,7 @@ def _error_lines(found: Assessment) -> list[str]:
         ("  staircase", "worst at the samples", (at for at, _ in worst)),
         ("", "worst between them, output held", (between for _, between in worst)),
     ):
-        add(label, pick, (value if value is None else value * peak for value in values), "counts", "no bound")
+        add(label, pick, (value if value is None else value * peak for value in values), unit, "no bound")
     bands = (exact.band, shipped.band)
     up_to = f"largest up to {number(exact.band.up_to_hz)} Hz"
     add("  gain", up_to, (band.magnitude_db for band in bands), "dB")
@@ -215,6 +228,17 @@ def _error_lines(found: Assessment) -> list[str]:
     return [*lines, row("", f"(estimates: {CONVENTION})")]
 
 
+def _staircase_scale(found: Assessment) -> tuple[str, float, str]:
+    """What the second column shows, and the promised peak in the unit of the output and that unit."""
+    match found.realisation:
+        case FixedPoint(program):
+            counts = 2 ** (program.data_bits - 1)
+            peak = nearest_float(program.input_format.peak / program.output_format.full_scale * counts)
+            return "with the integers", peak, "counts"
+        case SinglePrecision(program):
+            return "with the singles", nearest_float(program.input_format.peak), program.output_format.unit
+
+
 def _percent(value: float | None) -> float | None:
     return None if value is None else 100 * value
 
@@ -222,7 +246,7 @@ def _percent(value: float | None) -> float | None:
 def _figure(value: float, unit: str) -> str:
     if unit == "%" and 0 < abs(value) < _NOISE_PERCENT:
         return "< 1e-9 %"
-    return f"{number(value, 4)} {unit}"
+    return f"{number(value, 4)} {unit}".rstrip()
 
 
 def _ppm(errors: ResponseErrors) -> float | None:
@@ -245,10 +269,16 @@ def _budget_lines(budget: Sequence[BudgetLine]) -> list[str]:
 
 def kick_text(design: Design, rows: Kick) -> str:
     """A table of the three responses, what is in none of its columns above it."""
-    unit = _impulse_unit(design.signals.output.unit, design.signals.input.unit)
+    signals = design.signals
+    unit = _impulse_unit(signals.output.unit, signals.input.unit)
+    if design.arithmetic.kind == "float32":
+        kicked = f"the singles were kicked with {number(rows.amplitude, 9)} {signals.input.unit}".rstrip()
+        names, width = ("float32", f"output [{signals.output.unit or '1'}]"), 16
+    else:
+        kicked, names, width = f"the integers were kicked with {rows.amplitude} counts", ("integer", "counts"), 12
     lines = [
         f"{design.design.name}: impulse response in {unit}; {design.sampling.method} at "
-        f"{exact_text(design.sampling.rate_hz)} Hz; the integers were kicked with {rows.amplitude_counts} counts",
+        f"{exact_text(design.sampling.rate_hz)} Hz; {kicked}",
     ]
     if rows.dirac:
         lines.append(f"a Dirac part of weight {number(rows.dirac)} at t = dead time is in none of the columns")
@@ -256,31 +286,39 @@ def kick_text(design: Design, rows: Kick) -> str:
         lines.append("the model is improper: derivatives of the Dirac impulse at t = dead time are not in h(t)")
     if rows.clipped:
         lines.append(f"{rows.clipped} of the output codes are at the end of the word: a smaller --amplitude shows more")
-    lines.append(f"{'n':>6} {'t [s]':>14} {'analytic h(t)':>16} {'sampled h[n]/T':>16} {'integer':>16} {'counts':>12}")
-    columns = zip(rows.n, rows.t, rows.analytic, rows.sampled, rows.integer, rows.counts, strict=True)
-    for n, t, h, d, i, c in columns:
-        cells = " ".join(f"{value:>16.8g}" if isfinite(value) else f"{'none':>16}" for value in (h, d, i))
-        lines.append(f"{n:>6} {t:>14.8g} {cells} {c:>12}")
+    heads = f"{'analytic h(t)':>16} {'sampled h[n]/T':>16} {names[0]:>16} {names[1]:>{width}}"
+    lines.append(f"{'n':>6} {'t [s]':>14} {heads}")
+    columns = zip(rows.n, rows.t, rows.analytic, rows.sampled, rows.shipped, rows.outputs, strict=True)
+    for n, t, h, d, s, out in columns:
+        cells = " ".join(f"{value:>16.8g}" if isfinite(value) else f"{'none':>16}" for value in (h, d, s))
+        lines.append(f"{n:>6} {t:>14.8g} {cells} {_output(out):>{width}}")
     return "\n".join(lines)
+
+
+def _output(value: np.integer[Any] | np.floating[Any]) -> str:
+    """A code, or a single to the 9 digits that tell it from all others."""
+    if isinstance(value, np.integer):
+        return str(value)
+    return number(float(value), 9) if isfinite(value) else "none"
 
 
 def tour_text(found: Assessment, stop: Mapping[str, Any], seconds: float) -> str:
     """One demo design in a few lines."""
-    model, program, shipped = found.model, found.program, found.shipped
+    model, program, shipped = found.model, found.realisation.program, found.shipped
     with working_bits(128):
         form = closed_form(model.response_modes(), model.feedthrough())
-    agreement = "equal integer for integer" if stop["equal"] else "DIFFERENT from the simulator"
+    how = "integer for integer" if isinstance(program, Program) else "bit for bit"
+    agreement = f"equal {how}" if stop["equal"] else "DIFFERENT from the simulator"
     compiled = f"compiled by {stop['compiler']}; {stop['samples']} samples {agreement}"
-    count = len(program.sections)
+    if isinstance(program, Program):
+        label, words = "  integers", f"{program.data_bits}-bit data, {program.coefficient_bits}-bit coefficients"
+    else:
+        label, words = "  float32", "single precision"
     lines = [
         headline(found),
         row("  model", f"order {model.order}; h(t) = {form}", formula=True),
         row("  sampled", f"{found.sampled.method} at {exact_text(found.sampled.rate_hz)} Hz, {_delay_text(found)}"),
-        row(
-            "  integers",
-            f"{program.data_bits}-bit data, {program.coefficient_bits}-bit coefficients, "
-            f"{count} section{'s' if count > 1 else ''}{_impulse_text(shipped)}",
-        ),
+        row(label, f"{words}, {counted(len(program.sections), 'section')}{_impulse_text(shipped)}"),
         row("  C", f"{stop['c_lines']} lines; {'not compiled' if stop['lacking'] else compiled}"),
         row("  time", f"{seconds:.2f} s"),
         "",
