@@ -190,7 +190,7 @@ def _budget_lines(
 def _proved_figures(proofs: Bounds) -> dict[str, tuple[float | None, str]]:
     noise = (proofs.noise_rms, "estimate" if proofs.noise_rms is not None else proofs.why_not)
     if proofs.output is None:
-        nothing = (None, f"no bound: {proofs.why_not}")
+        nothing = (None, proofs.why_not if proofs.unbounded else f"no bound: {proofs.why_not}")
         return {"worst_case_counts": nothing, "noise_counts": noise, "dead_band_counts": nothing}
     while_linear = ", while no clamp acts" if proofs.clamped else ""
     worst: tuple[float | None, str] = (proofs.output.total, f"bound, staircase inputs{while_linear}")

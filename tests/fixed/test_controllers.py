@@ -4,6 +4,7 @@ import random
 from fractions import Fraction
 from math import ceil, floor, pi
 
+import control
 import numpy as np
 import pytest
 from flint import fmpq
@@ -287,3 +288,28 @@ def test_self_test_covers_the_preset():
     for line in statements:
         changed = files | {"probe.c": source.replace(line, line.replace(" -= ", " += "))}
         assert run_on_host(changed, program, np.zeros((4, 1), dtype=np.int64)).selftest > 1000
+
+
+def test_closed_loop_against_python_control():
+    """The integers as the controller of a sampled plant, against the loop that the library control computes in doubles.
+
+    As long as no clamp acts they differ by what the converter and the output word round, taken through the loop.
+    """
+    filtered = sampled(blocks(Pid(fmpq(2), fmpq(3))), 50, "bilinear")
+    volts = Signals(Signal("V", fmpq(8)), Signal("V", fmpq(8)))
+    program = build("parallel", filtered, signals=volts, coefficient_bits=20)
+    continuous = control.tf([2, 3], [1, 0])
+    plant = control.tf([1], [0.5, 1])
+    digital = control.sample_system(continuous, 1 / 50, method="bilinear")
+    held = control.sample_system(plant, 1 / 50, method="zoh")
+    expected = control.step_response(control.feedback(digital * held, 1), np.arange(500) / 50).outputs
+    (gain,), (one, pole) = held.num[0][0], held.den[0][0]
+    count = 8 / (1 << 15)
+    level, state, outputs = 0.0, {}, []
+    for _ in range(500):
+        outputs.append(level)
+        run = trace(program, [round((1 - level) / count)], state)
+        state = {name: int(value) for name, value in run.state.items()}
+        level = (gain * int(run.outputs[0]) * count - pole * level) / one
+    assert np.abs(np.array(outputs) - expected).max() < 3 * count
+    assert abs(outputs[-1] - 1) <= count

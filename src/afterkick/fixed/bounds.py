@@ -13,7 +13,7 @@ from itertools import count
 from math import ceil, floor, inf, sqrt
 
 import numpy as np
-from attrs import frozen
+from attrs import evolve, frozen
 from numpy.typing import NDArray
 
 from afterkick.fixed.exact_response import exact_response
@@ -28,13 +28,23 @@ from afterkick.fixed.modal_sums import (
     without_constant,
 )
 from afterkick.fixed.narrow import rounding_offset, shift_right
-from afterkick.fixed.program import Program, Sum, dependencies
+from afterkick.fixed.program import Program, Proof, ProvedRange, Sum, dependencies
 from afterkick.fixed.ranges import analyse
 from afterkick.fixed.simulate import simulate
 from afterkick.numbers import fraction
 from afterkick.sampling.sampled import Sampled
 
-__all__ = ["Attained", "Bounds", "Integration", "OutputError", "WordRange", "WorstCase", "bounds", "worst_input"]
+__all__ = [
+    "Attained",
+    "Bounds",
+    "Integration",
+    "OutputError",
+    "SumRange",
+    "WordRange",
+    "WorstCase",
+    "bounds",
+    "worst_input",
+]
 
 ATTAINING_SAMPLES = 8192
 """Of the worst input that is tried on the simulator."""
@@ -68,6 +78,22 @@ class WordRange:
     def fits(self) -> bool:
         """Whether the word never overflows, if no other does."""
         return self.capacity_low <= self.lowest and self.highest <= self.capacity_high
+
+
+@frozen
+class SumRange:
+    """How far a sum gets on the way, in any order of its terms, the rounding included."""
+
+    word: str
+    """That it writes."""
+    partial_sum: int
+    """No partial sum is larger in magnitude, while the words stay within their ranges."""
+    accumulator_bits: int
+
+    @property
+    def filling(self) -> float:
+        """The part of the accumulator that is taken; at most 1, as no program is built otherwise."""
+        return self.partial_sum / ((1 << (self.accumulator_bits - 1)) - 1)
 
 
 @frozen
@@ -126,6 +152,8 @@ class Bounds:
     peak_code: int
     """The largest input magnitude, in codes."""
     words: tuple[WordRange, ...]
+    sums: tuple[SumRange, ...]
+    """One for each computed word; words without a bound are taken as whole."""
     unbounded: str
     """Why no bound exists; empty where one does."""
     output: OutputError | None
@@ -184,6 +212,7 @@ def bounds(program: Program, sampled: Sampled, held: Sampled | None) -> Bounds:
     return Bounds(
         worst.peak_code,
         worst.ranges,
+        worst.sums,
         unbounded,
         error,
         float(floor(error.rounding)) if error is not None else None,
@@ -256,6 +285,17 @@ class WorstCase:
         return tuple(self._range(name) for name in self.system.computed)
 
     @cached_property
+    def sums(self) -> tuple[SumRange, ...]:
+        """Of every computed word."""
+        steps = [step for step in self.program.steps if isinstance(step, Sum)]
+        fitting = self.ranges if all(word.fits for word in self.ranges) else ()
+        # the 0 of a reset is among what a word holds, whatever its clamp says
+        listed = (ProvedRange(word.word, min(ceil(word.lowest), 0), max(floor(word.highest), 0)) for word in fitting)
+        program = evolve(self.program, proof=Proof(self.peak_code, tuple(listed))) if fitting else self.program
+        reached = analyse(program).partial_sums
+        return tuple(SumRange(step.dest, reached[step.dest], step.accumulator_bits) for step in steps)
+
+    @cached_property
     def noise_rms(self) -> float | None:
         """Estimate, of the output: white, uniformly distributed, independent rounding errors."""
         to_output = (responses[self.program.output] for responses in self.closed_to_rounding.values())
@@ -277,8 +317,7 @@ class WorstCase:
         word = self.program.word(name)
         if name in self.held:
             low, high = self.held[name]
-            # a reset leaves the 0 that the limits may leave out
-            return WordRange(name, min(low, 0), max(high, 0), 0.0, 0.0, word.lowest, word.highest, clamped=True)
+            return WordRange(name, low, high, 0.0, 0.0, word.lowest, word.highest, clamped=True)
         reach = _up(self.peak_code * self._sum(self.to_input[name]).upper)
         for source, responses in self.to_held.items():
             reach = _up(reach + _up(max(map(abs, self.held[source])) * self._sum(responses[name]).upper))

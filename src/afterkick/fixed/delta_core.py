@@ -14,10 +14,11 @@ from typing import TYPE_CHECKING
 from attrs import frozen
 from flint import arb, ctx, fmpq
 
-from afterkick.errors import Refused
+from afterkick.errors import Problem, Refused
 from afterkick.fixed.cascade import SCALING_BITS, bits_of
 from afterkick.fixed.program import Coefficient, Sum
 from afterkick.fixed.quantise import PROBE_BITS, ExactSection, Triple, denominator_problems
+from afterkick.fixed.ranges import Interval
 from afterkick.fixed.scaling import FloatSection
 from afterkick.fixed.wide import (
     LEAST_COEFFICIENT_BITS,
@@ -111,7 +112,10 @@ def delta_core(section: ExactSection, frame: Frame, gain: tuple[Scaled, ...] = (
         exact = _exact_integrator(frame, integers, fractions, reaches)
         core = _core(section, frame, integers, exact, reaches)
         if core is not None:
-            problems = denominator_problems(section, core.a, core.a_bits)
+            # in last places of the coefficient that 1 + a1 + a2 is: the fraction may be a shorter one
+            spare = max(integers.c[-1].fraction_bits - core.a_bits, 0)
+            one, a1, a2 = (value << spare for value in core.a)
+            problems = denominator_problems(section, (one, a1, a2), core.a_bits + spare)
             if problems:
                 raise Refused(problems)
             return core
@@ -160,7 +164,7 @@ def _exact_integrator(
     frame: Frame, integers: Integers, fractions: tuple[int, ...], reaches: tuple[int, ...]
 ) -> tuple[int, ...]:
     """With a pole at z = 1 the last state adds up its input: without any rounding, where it may be so wide."""
-    finest = integers.n[-1].fraction_bits + frame.source_fraction_bits
+    finest = min(integers.n[-1].fraction_bits + frame.source_fraction_bits, frame.most_fraction_bits)
     if frame.state_bits is not None or integers.c[-1].integer or not integers.n[-1].integer:
         return fractions
     room = MOST_STATE_BITS - frame.widths((*fractions[:-1], 0), reaches)[-1]
@@ -287,6 +291,8 @@ def _core(
             driving = [(c, f"e{number}", f"alpha{i + 1}")]
         if not sheet.temporary(differences[i], driving, fractions[i]):
             return None
+        if sheet.ranges[differences[i]].highest <= 0:  # rounded down the lowest is -1
+            raise _nothing_taken_in(number, sheet.ranges[states[i]])
     for state, difference in zip(states, differences, strict=True):
         limits = frame.limits if section.pole_at_one and state == wide else None
         if not sheet.state(state, (state, difference), limits):
@@ -304,17 +310,26 @@ def _core(
     )
 
 
+def _nothing_taken_in(number: int, state: Interval) -> Refused:
+    found = f"states of {bits_of(state) - 1} bits, in which all that comes in is rounded to nothing"
+    accepted = "states fine enough for the input and the coefficients"
+    remedy = "wider state_bits, or none"
+    return Refused(Problem(f"arithmetic.state_bits, section {number}", found, accepted, remedy))
+
+
 def _steady(section: ExactSection, sheet: Sheet, integers: Integers, states: list[str]) -> tuple[Sum, ...] | None:
     """w = gain x, and of order 2 c1 w = n1 x + s2; the output of a pole at z = 1 is not among them."""
-    sums = []
     source = sheet.frame.source
+    rests: list[tuple[str, list[Weighed]]] = []
     if integers.gain:
-        sums.append(sheet.steady(states[0], [(part, source, "") for part in integers.gain]))
+        rests.append((states[0], [(part, source, "") for part in integers.gain]))
     elif not section.pole_at_one or integers.n[0].integer:
         return None
     if len(states) > 1:
         slope_taken = Scaled(-integers.n[1].integer, integers.n[1].fraction_bits)
-        sums.append(sheet.steady(states[1], [(integers.c[0], states[0], ""), (slope_taken, source, "")]))
+        rests.append((states[1], [(integers.c[0], states[0], ""), (slope_taken, source, "")]))
+    # a state that rests at zero is left as a reset leaves it
+    sums = [sheet.steady(state, terms) for state, terms in rests if any(term[0].integer for term in terms)]
     return None if None in sums else tuple(one for one in sums if one is not None)
 
 

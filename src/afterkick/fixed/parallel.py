@@ -33,6 +33,7 @@ from afterkick.fixed.quantise import PROBE_BITS, ExactSection, exact_sections
 from afterkick.fixed.ranges import Interval, require_valid
 from afterkick.fixed.scaling import FloatSection
 from afterkick.fixed.wide import (
+    MOST_STATE_BITS,
     ONE,
     ZERO,
     Core,
@@ -56,6 +57,8 @@ __all__ = ["parallel_program"]
 
 MINUS_ONE = Scaled(-1, 0)
 MOST_TAPS = 3
+TRIES = 3
+"""Of binary points for which the sum of all parts fits the accumulator."""
 WANTED = "wanted"
 
 
@@ -100,15 +103,13 @@ def parallel_program(
         4 * len(sections),
         _limits(arithmetic.clamp, signals, builder.data_bits),
     )
-    taps, gains = _gains(parts, sections, ratio, builder.coefficient_bits)
-    cores = []
-    for section, gain in zip(sections, gains, strict=True):
-        try:
-            cores.append(delta_core(section, frame, gain))
-        except Refused as refusal:
-            problems += refusal.problems
-    if problems:
-        raise Refused(problems)
+    most = MOST_STATE_BITS
+    for _ in range(TRIES):
+        taps, gains = _gains(parts, sections, ratio, builder.coefficient_bits, most)
+        cores = _cores(sections, gains, evolve(frame, most_fraction_bits=most))
+        most, before = min(most, _finest_sum(builder, cores, taps)), most
+        if most == before:
+            break
     weighed = [(tap, delayed("x", sampled.delay_samples + i), _tap_name(i)) for i, tap in enumerate(taps)]
     depth = sampled.delay_samples + len(taps) - 1
     held = arithmetic.clamp is not None or any(section.pole_at_one for section in sections)
@@ -142,12 +143,36 @@ def _limits(clamp: tuple[fmpq, fmpq] | None, signals: "Signals", data_bits: int)
     return lowest, highest
 
 
+def _cores(sections: list[ExactSection], gains: list[tuple[Scaled, ...]], frame: Frame) -> list[Core]:
+    """The parts.
+
+    :raises Refused: with the problems of all of them.
+    """
+    problems: list[Problem] = []
+    cores = []
+    for section, gain in zip(sections, gains, strict=True):
+        try:
+            cores.append(delta_core(section, frame, gain))
+        except Refused as refusal:
+            problems += refusal.problems
+    if problems:
+        raise Refused(problems)
+    return cores
+
+
+def _finest_sum(builder: Builder, cores: list[Core], taps: tuple[Scaled, ...]) -> int:
+    """The fraction bits that the accumulator has room for when all parts and taps are at their largest."""
+    reach = sum((abs(tap.value) for tap in taps), Fraction(0)) * (1 << (builder.data_bits - 1))
+    reach += sum(Fraction(2) ** (core.bits - 1 - core.fraction_bits) for core in cores)
+    return builder.widest - 2 - math.ceil(reach).bit_length()
+
+
 def _tap_name(index: int) -> str:
     return f"direct{index}" if index else "direct"
 
 
 def _gains(
-    parts: Parts, sections: list[ExactSection], ratio: fmpq, bits: int
+    parts: Parts, sections: list[ExactSection], ratio: fmpq, bits: int, most_fraction_bits: int
 ) -> tuple[tuple[Scaled, ...], list[tuple[Scaled, ...]]]:
     """The taps, and the gain of each part at z = 1, none for a pole there: on one grid and with an exact sum.
 
@@ -169,7 +194,7 @@ def _gains(
             for part in map(Numbers.of, sections)
             for i, number in enumerate(part.n[1:])
         )
-    finest = bits + 2 - math.floor(math.log2(peak)) if peak else None
+    finest = min(most_fraction_bits, bits + 2 - math.floor(math.log2(peak)) if peak else most_fraction_bits)
     taps = tuple(
         ZERO
         if tap.contains(0)

@@ -85,6 +85,8 @@ class Analysis:
     """The words whose overflow rule can come into play; for all others it is proved that it can't."""
     proved: dict[str, Interval]
     """What the program's proof says of its words, the input and delayed copies included."""
+    partial_sums: dict[str, int] = field(factory=dict)
+    """By the word that a sum writes: no partial sum, in any order of the terms, has a larger magnitude."""
     preset_may_overflow: frozenset[str] = frozenset()
     """The states whose overflow rule can come into play in the preset."""
 
@@ -105,14 +107,16 @@ def analyse(program: Program) -> Analysis:
     if walk.through(program.steps) and program.output not in walk.written:
         walk.faults.append(f"the output {program.output} is never written")
     if program.preset is None or walk.faults:
-        return Analysis(tuple(walk.faults), frozenset(walk.may_overflow), proved)
+        return Analysis(tuple(walk.faults), frozenset(walk.may_overflow), proved, walk.partial_sums)
     # a preset starts from a reset, and from any input code
     words |= {word.name: word for word in program.preset.words}
     whole = {name: Interval.of_word(word.bits) for name, word in words.items()}
-    start = {program.input: whole[program.input], program.preset.wanted: whole[program.preset.wanted]}
+    start = {word.name: Interval(0, 0) for word in program.words if word.role is Role.STATE}
+    start |= {name: whole[name] for name in (program.input, program.preset.wanted)}
     preset = _Walk(program, words, whole, {}, start)
     preset.through(program.preset.steps)
-    return Analysis(tuple(preset.faults), frozenset(walk.may_overflow), proved, frozenset(preset.may_overflow))
+    overflowing = frozenset(walk.may_overflow), frozenset(preset.may_overflow)
+    return Analysis(tuple(preset.faults), overflowing[0], proved, walk.partial_sums, overflowing[1])
 
 
 @frozen
@@ -127,6 +131,7 @@ class _Walk:
     faults: list[str] = field(factory=list)
     may_overflow: set[str] = field(factory=set)
     written: set[str] = field(factory=set)
+    partial_sums: dict[str, int] = field(factory=dict)
 
     def through(self, steps: Iterable[Step]) -> bool:
         """Whether no step has a fault that hides what comes after it; the walk ends at such a one."""
@@ -141,7 +146,8 @@ class _Walk:
                 if faults:
                     self.faults.extend(faults)
                     return False
-                result = sum_range(step, self.ranges).result
+                reach = sum_range(step, self.ranges)
+                self.partial_sums[dest.name], result = reach.magnitude, reach.result
                 if dest.name in self.proved:
                     result = self.known[dest.name]
                 elif result not in self.known[dest.name]:

@@ -14,6 +14,7 @@ from attrs import evolve, field, frozen
 from flint import arb, fmpq
 
 from afterkick.errors import Problem, Refused
+from afterkick.fixed.carry import WIDEST_ACCUMULATOR
 from afterkick.fixed.cascade import SCALING_BITS, Builder, bits_of, delayed, float_section, moves, signal_words
 from afterkick.fixed.program import Coefficient, ProgramSection, Role, Rounding, Step, Sum, Term, Word
 from afterkick.fixed.quantise import PROBE_BITS, ExactSection, Triple
@@ -157,6 +158,8 @@ class Frame:
     """An upper bound of how many states and wide outputs there are."""
     limits: tuple[int, int] | None = None
     """What an output that integrates is held within, in last places of the data word; None: its word limits it."""
+    most_fraction_bits: int = MOST_STATE_BITS
+    """Of a state that integrates without rounding, if it has more than it needs for the noise."""
 
     def fraction_bits(self, errors: Sequence[FloatSection | int]) -> tuple[int, ...]:
         """Of each state: with these all roundings together add less than a quarter of the output's last place.
@@ -416,12 +419,13 @@ def output_sum(
     fractions = {core.wide: core.fraction_bits for core in cores} | {word: 0 for _, word, _ in taps}
     step = weighed_sum(builder, "y", [*((ONE, core.wide, "") for core in cores), *taps], fractions, ranges, 0)
     if step is None:
+        widen = "accumulator_bits = 64, " if builder.widest < WIDEST_ACCUMULATOR else ""
         raise Refused(
             Problem(
                 "arithmetic",
                 "the sum of the sections does not fit the accumulator",
                 f"a sum of at most {builder.widest} bits",
-                "accumulator_bits = 64, narrower states, or a larger output full scale",
+                f"{widen}narrower data or states, or a larger output full scale",
             )
         )
     return evolve(step, limits=limits)

@@ -4,7 +4,7 @@ from math import isfinite
 from typing import Any
 
 from afterkick.fixed.bounds import Bounds, Integration
-from afterkick.fixed.program import Program
+from afterkick.fixed.program import Program, quantised_dc_gain
 from afterkick.fixed.remedies import scale_remedies
 from afterkick.numbers import nearest_float
 from afterkick.report.formulas import counted
@@ -30,6 +30,10 @@ def proof_data(bounds: Bounds) -> dict[str, Any]:
                 "clamped": word.clamped,
             }
             for word in bounds.words
+        ],
+        "sums": [
+            {"word": one.word, "partial_sum": one.partial_sum, "accumulator_bits": one.accumulator_bits}
+            for one in bounds.sums
         ],
         "output_counts": None
         if output is None
@@ -65,6 +69,9 @@ def proof_rows(bounds: Bounds, program: Program) -> list[tuple[str, str]]:
         if free:
             fullest = max(free, key=lambda word: word.filling)
             text += f"; the fullest is {fullest.word}, {100 * fullest.filling:.4g} % full"
+        fullest_sum = max(bounds.sums, key=lambda one: one.filling)
+        text += f"; of the sums that of {fullest_sum.word}, {100 * fullest_sum.filling:.4g} %"
+        text += f" of {fullest_sum.accumulator_bits} bits"
         rows.append(("bounds", text))
         if bounds.clamped:
             names = ", ".join(word.word for word in bounds.clamped)
@@ -72,6 +79,9 @@ def proof_rows(bounds: Bounds, program: Program) -> list[tuple[str, str]]:
     else:
         rows.append(("bounds", f"nothing is proved: {bounds.why_not}"))
         rows += [("", f"remedy: {remedy}") for remedy in scale_remedies(bounds.overflowing, program)]
+        if quantised_dc_gain(program) is None and program.structure != "parallel":
+            remedy = 'structure = "parallel" keeps what integrates apart, in a wide state that a clamp holds'
+            rows.append(("", f"remedy: {remedy}"))
     if bounds.output is not None:
         out = bounds.output
         parts = f"coefficients {out.coefficients:.4g} + rounding {out.rounding:.4g} + sampling {out.sampling:.4g}"
