@@ -18,6 +18,14 @@ from attrs import evolve, frozen
 from flint import arb, ctx, fmpq
 
 from afterkick.errors import Problem, Refused
+from afterkick.fixed.binary_points import (
+    ONE,
+    ZERO,
+    Scaled,
+    nearest,
+    over_power_of_two,
+    rounded,
+)
 from afterkick.fixed.cascade import SCALING_BITS, bits_of, delay_problems, finished, scaled, unsupported
 from afterkick.fixed.delta_core import delta_core
 from afterkick.fixed.program import Coefficient, Move, Program, Role
@@ -32,16 +40,10 @@ from afterkick.fixed.quantise import (
 from afterkick.fixed.scaling import FloatSection
 from afterkick.fixed.wide import (
     LEAST_COEFFICIENT_BITS,
-    ONE,
-    ZERO,
     Core,
     Frame,
-    Scaled,
     Sheet,
     ball_floats,
-    nearest,
-    over_power_of_two,
-    rounded,
     wide_cascade,
 )
 from afterkick.numbers import is_exactly_zero, mid_float, round_to_integer, to_text, working_bits

@@ -15,6 +15,16 @@ from attrs import frozen
 from flint import arb, ctx, fmpq
 
 from afterkick.errors import Problem, Refused
+from afterkick.fixed.binary_points import (
+    ONE,
+    ZERO,
+    Scaled,
+    floor_log2,
+    nearest,
+    over_power_of_two,
+    rounded,
+    simplest,
+)
 from afterkick.fixed.cascade import SCALING_BITS, bits_of
 from afterkick.fixed.program import Coefficient, Sum
 from afterkick.fixed.quantise import PROBE_BITS, ExactSection, Triple, denominator_problems
@@ -23,20 +33,12 @@ from afterkick.fixed.scaling import FloatSection
 from afterkick.fixed.wide import (
     LEAST_COEFFICIENT_BITS,
     MOST_STATE_BITS,
-    ONE,
-    ZERO,
     Core,
     Frame,
-    Scaled,
     Sheet,
     Weighed,
     ball_floats,
     endless_at,
-    floor_log2,
-    nearest,
-    over_power_of_two,
-    rounded,
-    simplest,
 )
 from afterkick.numbers import is_exactly_zero, mid_float, to_text, working_bits
 

@@ -17,6 +17,16 @@ from attrs import evolve
 from flint import arb, ctx, fmpq
 
 from afterkick.errors import Problem, Refused
+from afterkick.fixed.binary_points import (
+    MINUS_ONE,
+    ONE,
+    ZERO,
+    Scaled,
+    floor_log2,
+    over_power_of_two,
+    rounded,
+    simplest,
+)
 from afterkick.fixed.cascade import (
     Builder,
     delay_problems,
@@ -34,17 +44,10 @@ from afterkick.fixed.ranges import Interval, require_valid
 from afterkick.fixed.scaling import FloatSection
 from afterkick.fixed.wide import (
     MOST_STATE_BITS,
-    ONE,
-    ZERO,
     Core,
     Frame,
-    Scaled,
     Weighed,
-    floor_log2,
     output_sum,
-    over_power_of_two,
-    rounded,
-    simplest,
     weighed_sum,
 )
 from afterkick.numbers import fraction, mid_float, round_to_integer, to_text, working_bits
@@ -55,7 +58,6 @@ if TYPE_CHECKING:
 
 __all__ = ["parallel_program"]
 
-MINUS_ONE = Scaled(-1, 0)
 MOST_TAPS = 3
 TRIES = 3
 """Of binary points for which the sum of all parts fits the accumulator."""

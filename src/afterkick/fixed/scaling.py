@@ -11,7 +11,7 @@ import numpy as np
 from attrs import frozen
 from numpy.typing import NDArray
 
-__all__ = ["NORMS", "FloatSection", "norm_exponents"]
+__all__ = ["NORMS", "FloatSection", "norm_exponents", "norm_logarithms"]
 
 SEGMENT = 2048
 """Samples of the pulse response in each octave of time."""
@@ -35,15 +35,20 @@ def norm_exponents(sections: Sequence[FloatSection], norm: str) -> list[int | No
     ``norm`` is a key of :data:`NORMS`.  The logarithm is first rounded to 3 decimals, so that the last bits of a
     library's arithmetic don't decide.  None where the norm is zero or doesn't exist.
     """
-    exponents: list[int | None] = []
+    return [None if value is None else math.ceil(value) for value in norm_logarithms(sections, norm)]
+
+
+def norm_logarithms(sections: Sequence[FloatSection], norm: str) -> list[float | None]:
+    """What :func:`norm_exponents` rounds up."""
+    logarithms: list[float | None] = []
     total = 0
     with np.errstate(all="ignore"):
         norms = NORMS[norm](sections)
     for section, value in zip(sections, norms, strict=True):
         total += section.exponent
         usable = math.isfinite(value) and value > 0
-        exponents.append(math.ceil(round(math.log2(value), 3)) + total if usable else None)
-    return exponents
+        logarithms.append(round(math.log2(value), 3) + total if usable else None)
+    return logarithms
 
 
 def _pole_radius(section: FloatSection) -> float:

@@ -13,9 +13,9 @@ from afterkick.model.model import Model
 from afterkick.model.partial_fractions import Mode, expand, product_taylor
 from afterkick.numbers import accurate, certified, is_exactly_zero
 from afterkick.sampling.pulse_transfer import PulseTransfer, ZRoot, expanded
-from afterkick.sampling.sections import Section, paired
+from afterkick.sampling.sections import Arrangement, Section, paired
 
-__all__ = ["ParallelSection", "Sampled", "Section"]
+__all__ = ["Arrangement", "ParallelSection", "Sampled", "Section"]
 
 
 @frozen
@@ -40,6 +40,8 @@ class Sampled:
     attempt: Callable[[], PulseTransfer | None] = field(repr=False)
     """The factored pulse transfer function at the present working precision; None: more bits needed."""
     warnings: tuple[str, ...] = ()
+    arrangement: Arrangement | None = None
+    """Of the sections; None: by the rule of :mod:`afterkick.sampling.sections`."""
 
     @property
     def rate_hz(self) -> fmpq:
@@ -206,7 +208,7 @@ def _transfer(sampled: Sampled, bits: int) -> PulseTransfer:
 def _sections(sampled: Sampled, bits: int) -> tuple[Section, ...]:
     def compute() -> tuple[Section, ...] | None:
         transfer = sampled.attempt()
-        return None if transfer is None else paired(transfer)
+        return None if transfer is None else paired(transfer, sampled.arrangement)
 
     def enough(sections: tuple[Section, ...] | None) -> bool:
         return sections is not None and all(

@@ -1,11 +1,12 @@
 """A pulse transfer function as sections of order 1 and 2.
 
 Poles nearest the unit circle choose first, each taking the zeros nearest to it; the cascade runs from the calmest
-section to the most resonant one (common practice).  Each section but the first has gain 1 at z = 1, or at z = -1 where
-it has a zero at z = 1; the first carries the rest of the gain.
+section to the most resonant one (common practice); an :class:`Arrangement` says otherwise.  Each section but the first
+has gain 1 at z = 1, or at z = -1 where it has a zero at z = 1; the first carries the rest of the gain.
 """
 
 from collections.abc import Sequence
+from itertools import pairwise
 
 from attrs import evolve, field, frozen
 from flint import arb
@@ -13,7 +14,13 @@ from flint import arb
 from afterkick.numbers import mid_float
 from afterkick.sampling.pulse_transfer import PulseTransfer, ZRoot, expanded
 
-__all__ = ["Section", "paired"]
+__all__ = ["NOTHING_LEFT", "Arrangement", "Roots", "Section", "in_order", "paired", "paired_by_rule", "same"]
+
+NOTHING_LEFT = 2.0**-60
+"""The part of its terms below which a sum is taken as zero where a section's scale is chosen."""
+
+Roots = tuple[tuple[ZRoot, ...], tuple[ZRoot, ...]]
+"""The poles and the zeros of one section."""
 
 
 @frozen
@@ -41,25 +48,60 @@ class Section:
         return 1 if self.a[2].is_zero() and self.b[2].is_zero() else 2
 
 
-def paired(transfer: PulseTransfer) -> tuple[Section, ...] | None:
-    """The sections, at the working precision ``transfer`` was computed with; None: more bits needed."""
-    poles = _pole_groups(transfer.poles)
-    zeros = sorted(transfer.zeros, key=_place)
-    assigned: list[tuple[tuple[ZRoot, ...], list[ZRoot]]] = []
-    for index, group in enumerate(poles):
-        pairs_to_place = sum(not zero.real for zero in zeros)
-        later = sum(_degree(other) == 2 for other in poles[index + 1 :])
-        taken = _nearest(group, zeros, must_take_pair=pairs_to_place > later)
-        for zero in taken:
-            zeros.remove(zero)
-        assigned.append((group, taken))
+@frozen
+class Arrangement:
+    """Which roots each section has, in the order of the cascade: numbers in the lists of :func:`in_order`."""
+
+    poles: tuple[tuple[int, ...], ...]
+    zeros: tuple[tuple[int, ...], ...]
+
+    def roots(self, transfer: PulseTransfer) -> tuple[Roots, ...] | None:
+        """The same at the precision of ``transfer``; None: more bits needed."""
+        poles, zeros = in_order(transfer.poles), in_order(transfer.zeros)
+        if poles is None or zeros is None:
+            return None
+        return tuple(
+            (tuple(poles[i] for i in ours), tuple(zeros[i] for i in theirs))
+            for ours, theirs in zip(self.poles, self.zeros, strict=True)
+        )
+
+
+def in_order(roots: Sequence[ZRoot]) -> list[ZRoot] | None:
+    """By Re + Im/sqrt(2), which hardly any two have in common: the same order at every precision; None: more bits
+    needed to tell two roots apart, or a pair from two real roots."""
+    if any(not root.real and root.value.imag.contains(0) for root in roots):
+        return None
+    keyed = sorted(
+        ((root.value.real + root.value.imag / arb(2).sqrt(), root) for root in roots),
+        key=lambda each: mid_float(each[0]),
+    )
+    if any(low.overlaps(high) and not same(one, other) for (low, one), (high, other) in pairwise(keyed)):
+        return None
+    return [root for _, root in keyed]
+
+
+def same(one: ZRoot, other: ZRoot) -> bool:
+    """Whether two roots are one that is repeated."""
+    if one.name is not None or other.name is not None:
+        return one.name == other.name and one.real == other.real
+    return one.real == other.real and bool(one.value.is_exact()) and bool(one.value == other.value)
+
+
+def paired(transfer: PulseTransfer, arrangement: Arrangement | None = None) -> tuple[Section, ...] | None:
+    """The sections, at the working precision ``transfer`` was computed with; None: more bits needed.
+
+    Without an ``arrangement`` the rule decides.
+    """
+    cascade = paired_by_rule(transfer) if arrangement is None else arrangement.roots(transfer)
+    if cascade is None:
+        return None
     late = transfer.leading
     sections = []
-    for group, taken in assigned:
+    for group, taken in reversed(cascade):
         room = min(late, _degree(group) - _degree(taken))
         late -= room
         sections.append(_section(group, taken, room))
-    assert late == 0 == len(zeros), "a numerator of higher order than its denominator"
+    assert late == 0, "a numerator of higher order than its denominator"
     scales = [_unit_scale(section) for section in sections]
     if any(scale.contains(0) or not scale.is_finite() for scale in scales):
         return None
@@ -70,6 +112,22 @@ def paired(transfer: PulseTransfer) -> tuple[Section, ...] | None:
         evolve(section, b=_three([value * scale for value in section.b]), b_at_one=section.b_at_one * scale)
         for section, scale in reversed(list(zip(sections, scales, strict=True)))
     )
+
+
+def paired_by_rule(transfer: PulseTransfer) -> tuple[Roots, ...]:
+    """Each section's poles and the zeros nearest to them, in the order of the cascade."""
+    poles = _pole_groups(transfer.poles)
+    zeros = sorted(transfer.zeros, key=_place)
+    assigned: list[Roots] = []
+    for index, group in enumerate(poles):
+        pairs_to_place = sum(not zero.real for zero in zeros)
+        later = sum(_degree(other) == 2 for other in poles[index + 1 :])
+        taken = _nearest(group, zeros, must_take_pair=pairs_to_place > later)
+        for zero in taken:
+            zeros.remove(zero)
+        assigned.append((group, tuple(taken)))
+    assert not zeros, "a numerator of higher order than its denominator"
+    return tuple(reversed(assigned))
 
 
 def _degree(roots: Sequence[ZRoot]) -> int:
@@ -141,4 +199,4 @@ def _unit_scale(section: Section) -> arb:
 
 def _nothing_left(total: arb, group: Sequence[arb]) -> bool:
     """Whether a sum is zero as far as a choice of scale is concerned; the product of the sections stays exact."""
-    return bool(abs(total) < sum((abs(value) for value in group), arb(0)) * arb(2) ** -60)
+    return bool(abs(total) < sum((abs(value) for value in group), arb(0)) * arb(NOTHING_LEFT))
