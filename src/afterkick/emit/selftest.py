@@ -74,9 +74,9 @@ def selftest_view(program: Program, symbols: Symbols) -> SelfTestView:
 
 def _starts(program: Program, limits: Interval) -> StartsView:
     """From rest, with the input and the wanted output small and large, of equal and of opposite signs."""
-    word = program.word(program.output)
-    pairs = [(0, word.highest // 3), (1, 0), (limits.highest // 9, word.highest // 2)]
-    pairs += [(limits.highest // 9, word.lowest // 2), (limits.lowest // 9, word.lowest // 5)]
+    lowest, highest = program.output_ends
+    pairs = [(0, highest // 3), (1, 0), (limits.highest // 9, highest // 2)]
+    pairs += [(limits.highest // 9, lowest // 2), (limits.lowest // 9, lowest // 5)]
     expected: list[int] = []
     for code, wanted in pairs:
         expected += trace(program, [code] * START_SAMPLES, preset_state(program, code, wanted)).outputs.tolist()

@@ -263,6 +263,13 @@ class Program:
         for section in self.sections:
             yield from section.steps
 
+    @property
+    def output_ends(self) -> tuple[int, int]:
+        """The lowest and the highest output code: of the clamp, where there is one, else of the word."""
+        word = self.word(self.output)
+        limits = (step.limits for step in self.steps if isinstance(step, Sum) and step.dest == self.output)
+        return next(limits, None) or (word.lowest, word.highest)
+
     def word(self, name: str) -> Word:
         """The word of that name; KeyError where there is none."""
         return self._words[name]

@@ -41,7 +41,7 @@ class Kick:
     improper: bool
     """Whether h also holds derivatives of the Dirac impulse, which are in none of the columns."""
     clipped: int
-    """How many output codes are the lowest or highest of the word; 0 for singles."""
+    """How many output codes are the lowest or highest of the word or its clamp; 0 for singles."""
 
 
 def kick(model: Model, sampled: Sampled, program: "Program | FloatProgram", samples: int, amplitude: fmpq) -> Kick:
@@ -105,8 +105,7 @@ def _integer_answer(program: Program, samples: int, amplitude: fmpq) -> Answer:
     stimulus = np.zeros(samples, dtype=np.int64)
     stimulus[0] = code
     counts = simulate(program, stimulus)
-    output = program.word(program.output)
-    clipped = int(np.count_nonzero((counts == output.lowest) | (counts == output.highest)))
+    clipped = int(np.count_nonzero(np.isin(counts, program.output_ends)))
     return code, counts, nearest_float(program.output_format.full_scale / full_scale / code), clipped
 
 

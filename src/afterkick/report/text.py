@@ -285,7 +285,7 @@ def kick_text(design: Design, rows: Kick) -> str:
     if rows.improper:
         lines.append("the model is improper: derivatives of the Dirac impulse at t = dead time are not in h(t)")
     if rows.clipped:
-        lines.append(f"{rows.clipped} of the output codes are at the end of the word: a smaller --amplitude shows more")
+        lines.append(f"{rows.clipped} of the output codes are at an end of its range: a smaller --amplitude shows more")
     heads = f"{'analytic h(t)':>16} {'sampled h[n]/T':>16} {names[0]:>16} {names[1]:>{width}}"
     lines.append(f"{'n':>6} {'t [s]':>14} {heads}")
     columns = zip(rows.n, rows.t, rows.analytic, rows.sampled, rows.shipped, rows.outputs, strict=True)
