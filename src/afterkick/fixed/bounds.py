@@ -10,7 +10,7 @@ anywhere within the clamp's limits; the output's error as long as no clamp acts,
 
 from functools import cached_property
 from itertools import count
-from math import ceil, floor, inf, sqrt
+from math import ceil, floor, inf, isfinite, sqrt
 
 import numpy as np
 from attrs import evolve, frozen
@@ -208,6 +208,8 @@ def bounds(program: Program, sampled: Sampled, held: Sampled | None) -> Bounds:
     unbounded = _unbounded(worst.ranges) if sampled.stable or worst.held else _not_stable(sampled)
     proved = not unbounded and all(word.fits for word in worst.ranges)
     error = _output_error(worst, sampled, held) if proved else None
+    if error is not None and not isfinite(error.total):
+        proved, error, unbounded = False, None, "unbounded: the responses are beyond the range of double precision"
     to_output = worst.to_input[program.output]
     return Bounds(
         worst.peak_code,

@@ -9,10 +9,16 @@ from afterkick.sampling.sampled import Sampled
 
 __all__ = ["exact_response"]
 
+FAINT = arb(2) ** -64
+
 
 def exact_response(sampled: Sampled, scale: fmpq) -> ModalResponse:
     """The exact sampled filter times ``scale``, without its whole-sample delay."""
-    early = 1 + sum(is_exactly_zero(pole.value) for pole in sampled.transfer().poles)
+    poles = sampled.transfer().poles
+    early = 1 + sum(is_exactly_zero(pole.value) for pole in poles)
+    if any(abs(pole.value) < FAINT and not is_exactly_zero(pole.value) for pole in poles):
+        # what is all but zero at once may have coefficients beyond any double: its first powers are taken one by one
+        early += 1 + len(poles)
 
     def compute() -> tuple[tuple[arb, ...], tuple[Mode, ...]]:
         first = tuple(value * scale for value in sampled.first_samples(early))

@@ -7,7 +7,7 @@ rounds is bounded and added; what comes after the last block is bounded by a geo
 
 from collections.abc import Iterator, Sequence
 from functools import lru_cache
-from math import comb, inf
+from math import comb, inf, isfinite
 
 import numpy as np
 from attrs import frozen
@@ -111,6 +111,8 @@ def absolute_sum(response: ModalResponse) -> AbsoluteSum:
         if tail <= TAIL * lower or start >= LONGEST:
             return AbsoluteSum(lower, _up(upper + tail), squares)
         block, slack = _block(response.modes, start)
+        if not isfinite(slack):
+            return AbsoluteSum(lower, inf, inf)
         total = float(np.sum(np.abs(block)))
         squares += float(block @ block)
         # pairwise or not, a float sum of BLOCK terms is within BLOCK unit round-offs
@@ -160,7 +162,10 @@ def _extended(response: ModalResponse, length: int) -> Iterator[arb]:
 
 
 def _block(modes: Sequence[Mode], start: int) -> tuple[Floats, float]:
-    """h[start] .. h[start + BLOCK - 1] without the first samples, and a bound of the sum of their errors."""
+    """h[start] .. h[start + BLOCK - 1] without the first samples, and a bound of the sum of their errors.
+
+    Beyond the range of doubles the bound is infinite.
+    """
     k0 = start - 1
     weights: list[complex] = []
     radii: list[float] = []
@@ -177,6 +182,8 @@ def _block(modes: Sequence[Mode], start: int) -> tuple[Floats, float]:
                 radii.append(_up(float(weight.rad().upper())))
                 tables.append(_powers(*_exact_parts(mode.pole), i))
     factor, table = np.array(weights), np.array(tables)
+    if not np.all(np.isfinite(factor)):
+        return np.zeros(BLOCK), inf
     found: Floats = factor.real @ table.real - factor.imag @ table.imag
     lengths = np.sum(np.abs(table), axis=1)
     sizes = float(np.abs(factor) @ lengths)
