@@ -13,11 +13,11 @@ from afterkick.design.schema import Arithmetic
 from afterkick.emit import emit_c
 from afterkick.errors import Refused
 from afterkick.fixed import Program, simulate
-from afterkick.fixed.bounds import WorstCase
 from afterkick.fixed.carry import with_carry
 from afterkick.fixed.ranges import require_valid
 from afterkick.fixed.relax import Relaxation, relax
 from afterkick.fixed.structures import candidates
+from afterkick.fixed.worst_case import WorstCase
 from emit.test_c_against_simulator import build, call, driver
 from fixed.carried_designs import codes_within, promising, transposed
 from fixed.random_designs import program_of

@@ -26,11 +26,12 @@ from numpy.typing import NDArray
 
 from afterkick.design import schema
 from afterkick.errors import AfterkickError
-from afterkick.fixed.bounds import Bounds, WorstCase, bounds
+from afterkick.fixed.bounds import Bounds, bounds
 from afterkick.fixed.modal_sums import modal_response, values
 from afterkick.fixed.narrow import shift_right
 from afterkick.fixed.program import Move, Program, Role, Sum
 from afterkick.fixed.structures import build_program
+from afterkick.fixed.worst_case import WorstCase
 from afterkick.model.blocks import block_factors
 from afterkick.model.model import build
 from afterkick.sampling import Sampled, sample
@@ -306,6 +307,8 @@ class Row:
     error: float
     coefficients: float
     """Simulated / bound; 1 where both are 0."""
+    missing: float
+    """Of the coefficient part, bound - simulated, in counts."""
     capped: bool
     """Whether the coefficient part would have needed more than LINEAR_LONGEST samples."""
 
@@ -345,6 +348,7 @@ def judged(program: Program, sampled: Sampled, found: Bounds, seed: int) -> Row:
         ranges[program.output],
         _ratio(error, limit),
         _ratio(reached, found.output.coefficients),
+        found.output.coefficients - reached,
         capped,
     )
 
@@ -405,12 +409,10 @@ def report(designs: int, rows: list[Row], structures: Counter[str]) -> None:
     for name, ratios in table.items():
         print(f"simulated / bound, {name}: median {np.median(ratios):.4f}, lowest {np.min(ratios):.4f}")
     met = sum(row.coefficients >= GOAL for row in rows)
-    capped = [row.coefficients for row in rows if row.capped]
-    free = [row.coefficients for row in rows if not row.capped]
     print(f"coefficient part: {met} of {len(rows)} reach {GOAL} or more")
-    print(f"coefficient part: {len(capped)} would need inputs of more than {LINEAR_LONGEST} samples")
-    if free:
-        print(f"coefficient part without those: lowest {min(free):.4f}, below {GOAL}: {sum(r < GOAL for r in free)}")
+    print(f"coefficient part: {sum(r.capped for r in rows)} need inputs of more than {LINEAR_LONGEST} samples")
+    short = [row.missing for row in rows if row.coefficients < GOAL and not row.capped]
+    print(f"coefficient part: {len(short)} others below {GOAL}, by at most {max(short, default=0.0):.2g} counts")
 
 
 if __name__ == "__main__":

@@ -22,13 +22,13 @@ from flint import fmpq
 
 from afterkick.design.schema import Arithmetic, Lowpass, Sampling, Signal, Signals
 from afterkick.errors import Refused
-from afterkick.fixed.bounds import WorstCase
 from afterkick.fixed.exact_response import exact_response
 from afterkick.fixed.modal_sums import difference, modal_response, values
 from afterkick.fixed.program import Program
 from afterkick.fixed.settled import settled_offsets, step_codes
 from afterkick.fixed.simulate import trace
 from afterkick.fixed.structures import build_program, operations
+from afterkick.fixed.worst_case import WorstCase
 from afterkick.model.blocks import block_factors
 from afterkick.model.model import build
 from afterkick.numbers import nearest_float

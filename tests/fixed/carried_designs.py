@@ -10,10 +10,10 @@ from numpy.typing import NDArray
 
 from afterkick.errors import Refused
 from afterkick.fixed import Program
-from afterkick.fixed.bounds import WorstCase
 from afterkick.fixed.carry import with_carry
 from afterkick.fixed.program import Move, Overflow, ProgramSection, Role, Rounding, Sum, Term, Word
 from afterkick.fixed.relax import relax
+from afterkick.fixed.worst_case import WorstCase
 from fixed.random_designs import program_of, random_codes, random_program
 
 

@@ -12,7 +12,7 @@ import pytest
 from flint import fmpq, fmpq_poly
 
 from afterkick.fixed.linear import RationalResponse
-from afterkick.fixed.modal_sums import _block, absolute_sum, difference, modal_response, values
+from afterkick.fixed.modal_sums import _Blocks, absolute_sum, difference, modal_response, values
 
 # sum |h| of 1 / (1 - 2 r cos(pi/N)/z + r^2/z^2), r = 0.95
 ALL_POLE_SUMS = {2: 10.256410256410254, 3: 13.672217353198938, 4: 17.49925743726912, 6: 25.480426379755084}
@@ -119,7 +119,7 @@ def test_a_late_block_is_within_its_slack() -> None:
     """A million samples on, the powers of the pole still come from balls: nothing has accumulated."""
     found = modal_response(response([1], [1, fmpq(-999999, 1000000)]))
     start = 1 << 20
-    block, slack = _block(found.modes, start)
+    block, slack = _Blocks(found.modes).at(start)
     with mpmath.workdps(60):
         pole = mpmath.mpf(999999) / 1000000
         error = sum(abs(mpmath.mpf(float(value)) - pole ** (start + k)) for k, value in enumerate(block))

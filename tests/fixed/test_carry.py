@@ -9,11 +9,11 @@ from attrs import evolve
 
 from afterkick.errors import Refused
 from afterkick.fixed import Program, simulate, trace
-from afterkick.fixed.bounds import WorstCase
 from afterkick.fixed.carry import with_carry
 from afterkick.fixed.narrow import residue_limits, shift_right
 from afterkick.fixed.program import Move, Overflow, Role, Rounding, Sum, Term
 from afterkick.fixed.ranges import analyse, require_valid
+from afterkick.fixed.worst_case import WorstCase
 from fixed.carried_designs import carried_program, transposed
 from fixed.random_designs import program_of, random_codes, random_program
 

@@ -11,9 +11,9 @@ import numpy as np
 import pytest
 
 from afterkick.fixed import Program
-from afterkick.fixed.bounds import WorstCase
 from afterkick.fixed.narrow import fit, shift_right
 from afterkick.fixed.program import Sum
+from afterkick.fixed.worst_case import WorstCase
 from fixed.random_designs import program_of
 
 JACKSON = [(1, 2, 1), (3, 4, 2), (17, 20, 3), (9, 10, 5), (19, 20, 10)]

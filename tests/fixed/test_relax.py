@@ -10,12 +10,13 @@ from afterkick.design.schema import Arithmetic
 from afterkick.emit import emit_c
 from afterkick.errors import Refused
 from afterkick.fixed import simulate, trace
-from afterkick.fixed.bounds import WorstCase, worst_input
+from afterkick.fixed.bounds import worst_input
 from afterkick.fixed.carry import with_carry
 from afterkick.fixed.program import Move, Preset, Program, Proof, ProvedRange, Role, Sum, Word
 from afterkick.fixed.ranges import analyse, require_valid
 from afterkick.fixed.relax import Relaxation, relax
 from afterkick.fixed.structures import build_program, candidates, operations
+from afterkick.fixed.worst_case import WorstCase
 from fixed.carried_designs import carried_widths, codes_within, promising, relaxed_programs, transposed
 from fixed.random_designs import program_of
 from fixed.structure_designs import HALF, ROOMY, at

@@ -14,11 +14,11 @@ from flint import fmpq
 
 from afterkick.design.schema import Integrator, Lag, Lowpass
 from afterkick.fixed import Program, simulate, trace
-from afterkick.fixed.bounds import WorstCase
 from afterkick.fixed.narrow import fit, shift_right
 from afterkick.fixed.program import Move
 from afterkick.fixed.repetition import until_repeated
 from afterkick.fixed.settled import StepOffset, settled_offsets, step_codes
+from afterkick.fixed.worst_case import WorstCase
 from afterkick.report.settling import settled_data, settled_rows
 from fixed.random_designs import PlainSampled, program_of, random_program
 from fixed.structure_designs import HALF, build

@@ -5,8 +5,8 @@ from flint import fmpq
 
 from afterkick.design.schema import Arithmetic
 from afterkick.errors import Refused
-from afterkick.fixed.bounds import WorstCase
 from afterkick.fixed.structures import BUILDERS, build_program, candidates, chosen, operations, state_bytes
+from afterkick.fixed.worst_case import WorstCase
 from fixed.random_designs import program_of
 from fixed.structure_designs import BUILD, ROOMY, at, build
 

@@ -12,10 +12,11 @@ from afterkick.design.schema import Arithmetic, Signals
 from afterkick.emit import emit_c
 from afterkick.errors import Refused
 from afterkick.fixed import direct_program, simulate, trace
-from afterkick.fixed.bounds import WorstCase, worst_input
+from afterkick.fixed.bounds import worst_input
 from afterkick.fixed.program import Role, Sum
 from afterkick.fixed.ranges import analyse
 from afterkick.fixed.transposed import transposed_program
+from afterkick.fixed.worst_case import WorstCase
 from afterkick.numbers import working_bits
 from fixed.random_designs import PlainSampled, _poles, _zeros, random_codes
 from fixed.structure_designs import HALF, NEW, STABLE_CASES, WIDE, at, build, response_of_steps

@@ -1,25 +1,20 @@
-"""What a Program can do at worst, for every input within the promised peak: rigorous, from exact linear responses.
+"""What a Program's output can be off by, for every input within the promised peak: rigorous, from exact responses.
 
-While no word has overflowed, each word is the exact linear response to the input plus the responses to the roundings,
-whose sizes are known.  If the sum of the worst of all of these fits every word, no word ever overflows; so the bounds
-hold for ever, by induction over the samples.  If it does not fit, nothing is proved, and the result says which word.
-
-A state that integrates has no such bound: a clamp holds it.  The other words are bounded with it as one more input,
-anywhere within the clamp's limits; the output's error as long as no clamp acts, with the part that grows apart.
+Where the worst case of every word fits it, the bounds hold for ever.  If it does not, nothing is proved, and the result
+says which word.  Of a filter that integrates they hold as long as no clamp acts, with the part that grows apart.
 """
 
 from functools import cached_property
 from itertools import count
-from math import ceil, floor, inf, isfinite, sqrt
+from math import floor, inf, isfinite
 
 import numpy as np
-from attrs import evolve, frozen
+from attrs import frozen
 from numpy.typing import NDArray
 
 from afterkick.fixed.exact_response import exact_response
-from afterkick.fixed.linear import LinearSystem, RationalResponse, RoundingSource
+from afterkick.fixed.linear import RationalResponse
 from afterkick.fixed.modal_sums import (
-    AbsoluteSum,
     ModalResponse,
     absolute_sum,
     difference,
@@ -28,23 +23,13 @@ from afterkick.fixed.modal_sums import (
     without_constant,
 )
 from afterkick.fixed.narrow import rounding_offset, shift_right
-from afterkick.fixed.program import Program, Proof, ProvedRange, Sum, dependencies
-from afterkick.fixed.ranges import analyse
+from afterkick.fixed.program import Program, Sum
 from afterkick.fixed.simulate import simulate
+from afterkick.fixed.worst_case import SumRange, WordRange, WorstCase, rounded_up
 from afterkick.numbers import fraction
 from afterkick.sampling.sampled import Sampled
 
-__all__ = [
-    "Attained",
-    "Bounds",
-    "Integration",
-    "OutputError",
-    "SumRange",
-    "WordRange",
-    "WorstCase",
-    "bounds",
-    "worst_input",
-]
+__all__ = ["Attained", "Bounds", "Integration", "OutputError", "bounds", "worst_input"]
 
 ATTAINING_SAMPLES = 8192
 """Of the worst input that is tried on the simulator."""
@@ -52,48 +37,6 @@ LIFETIME_SAMPLES = 2.0**64
 """A growth that does not add up to NOTHING counts in so many samples is counted as that: more than half a million years
 at a million samples a second."""
 NOTHING = 2.0**-20
-
-
-@frozen
-class WordRange:
-    """What a computed word can hold, in its own last places; both limits are bounds."""
-
-    word: str
-    lowest: float
-    highest: float
-    from_input: float
-    """Of the magnitude, the input's part."""
-    from_rounding: float
-    capacity_low: int
-    capacity_high: int
-    clamped: bool = False
-    """Whether it is a clamp that holds the range."""
-
-    @property
-    def filling(self) -> float:
-        """The part of the word that the range takes, at most 1 where it fits."""
-        return max(self.highest / self.capacity_high, self.lowest / self.capacity_low)
-
-    @property
-    def fits(self) -> bool:
-        """Whether the word never overflows, if no other does."""
-        return self.capacity_low <= self.lowest and self.highest <= self.capacity_high
-
-
-@frozen
-class SumRange:
-    """How far a sum gets on the way, in any order of its terms, the rounding included."""
-
-    word: str
-    """That it writes."""
-    partial_sum: int
-    """No partial sum is larger in magnitude, while the words stay within their ranges."""
-    accumulator_bits: int
-
-    @property
-    def filling(self) -> float:
-        """The part of the accumulator that is taken; at most 1, as no program is built otherwise."""
-        return self.partial_sum / ((1 << (self.accumulator_bits - 1)) - 1)
 
 
 @frozen
@@ -115,7 +58,7 @@ class OutputError:
     @property
     def total(self) -> float:
         """Against the continuous model, for staircase inputs; without what grows."""
-        return _up(self.coefficients + self.rounding + self.sampling)
+        return rounded_up(self.coefficients + self.rounding + self.sampling)
 
 
 @frozen
@@ -225,151 +168,6 @@ def bounds(program: Program, sampled: Sampled, held: Sampled | None) -> Bounds:
     )
 
 
-@frozen(eq=False)
-class WorstCase:
-    """The linear responses of a program and the ranges they allow, as long as no word overflows."""
-
-    program: Program
-
-    @cached_property
-    def peak_code(self) -> int:
-        """The promised peak in codes, rounded up; full scale is the code -2^(bits-1)."""
-        program = self.program
-        scale = 1 << (program.data_bits - 1)
-        return min(ceil(fraction(program.input_format.peak / program.input_format.full_scale * scale)), scale)
-
-    @cached_property
-    def held(self) -> dict[str, tuple[int, int]]:
-        """The words that integrate and that a clamp holds, with its limits."""
-        return {
-            step.dest: step.limits
-            for step in self.program.steps
-            if isinstance(step, Sum)
-            and step.limits is not None
-            and step.dest in dependencies(self.program, (term.word for term in step.terms))
-        }
-
-    @cached_property
-    def may_overflow(self) -> frozenset[str]:
-        """The words that interval arithmetic does not keep from overflowing."""
-        return analyse(self.program).may_overflow
-
-    @cached_property
-    def system(self) -> LinearSystem:
-        """The exact linear system, cut at the words that are held."""
-        return LinearSystem(self.program, frozenset(self.held))
-
-    @cached_property
-    def closed(self) -> LinearSystem:
-        """The same without any cut."""
-        return LinearSystem(self.program) if self.held else self.system
-
-    @cached_property
-    def to_input(self) -> dict[str, RationalResponse]:
-        """Each computed word's response to the input."""
-        return self.system.responses(None)
-
-    @cached_property
-    def to_rounding(self) -> dict[RoundingSource, dict[str, RationalResponse]]:
-        """Each computed word's response to each rounding."""
-        return {source: self.system.responses(source.dest) for source in self.system.sources}
-
-    @cached_property
-    def closed_to_rounding(self) -> dict[RoundingSource, dict[str, RationalResponse]]:
-        """The same without any cut."""
-        if not self.held:
-            return self.to_rounding
-        return {source: self.closed.responses(source.dest) for source in self.closed.sources}
-
-    @cached_property
-    def ranges(self) -> tuple[WordRange, ...]:
-        """Of every computed word."""
-        return tuple(self._range(name) for name in self.system.computed)
-
-    @cached_property
-    def sums(self) -> tuple[SumRange, ...]:
-        """Of every computed word."""
-        steps = [step for step in self.program.steps if isinstance(step, Sum)]
-        fitting = self.ranges if all(word.fits for word in self.ranges) else ()
-        # the 0 of a reset is among what a word holds, whatever its clamp says
-        listed = (ProvedRange(word.word, min(ceil(word.lowest), 0), max(floor(word.highest), 0)) for word in fitting)
-        program = evolve(self.program, proof=Proof(self.peak_code, tuple(listed))) if fitting else self.program
-        reached = analyse(program).partial_sums
-        return tuple(SumRange(step.dest, reached[step.dest], step.accumulator_bits) for step in steps)
-
-    @cached_property
-    def noise_rms(self) -> float | None:
-        """Estimate, of the output: white, uniformly distributed, independent rounding errors."""
-        to_output = (responses[self.program.output] for responses in self.closed_to_rounding.values())
-        variance = sum(self._sum(response).squares for response in to_output)
-        return None if variance == inf else sqrt(variance / 12)
-
-    @cached_property
-    def rounding_span(self) -> tuple[float, float]:
-        """The least and the most that all roundings together add to the output."""
-        up, down = self.from_rounding(self.program.output, self.to_rounding)
-        return -down, up
-
-    @cached_property
-    def to_held(self) -> dict[str, dict[str, RationalResponse]]:
-        """Each computed word's response to each word that is held."""
-        return {name: self.system.responses(name) for name in self.held}
-
-    def _range(self, name: str) -> WordRange:
-        word = self.program.word(name)
-        if name in self.held:
-            low, high = self.held[name]
-            return WordRange(name, low, high, 0.0, 0.0, word.lowest, word.highest, clamped=True)
-        reach = _up(self.peak_code * self._sum(self.to_input[name]).upper)
-        for source, responses in self.to_held.items():
-            reach = _up(reach + _up(max(map(abs, self.held[source])) * self._sum(responses[name]).upper))
-        up, down = self.from_rounding(name, self.to_rounding)
-        lowest, highest = _down(-reach - down), _up(reach + up)
-        if name not in self.may_overflow:
-            # no state and no input code can take it beyond: what the sum of the worst cases says more is its slack
-            lowest, highest = max(lowest, float(word.lowest)), min(highest, float(word.highest))
-        limits = next((s.limits for s in self.program.steps if isinstance(s, Sum) and s.dest == name), None)
-        clamped = limits is not None and not (limits[0] <= lowest and highest <= limits[1])
-        if limits is not None and clamped:
-            lowest, highest = max(lowest, limits[0]), min(highest, limits[1])
-        return WordRange(name, lowest, highest, reach, max(up, down), word.lowest, word.highest, clamped)
-
-    def from_rounding(
-        self, name: str, to_rounding: dict[RoundingSource, dict[str, RationalResponse]]
-    ) -> tuple[float, float]:
-        """How far up and down all roundings take a word at most."""
-        up = down = 0.0
-        for source, responses in to_rounding.items():
-            response = responses[name]
-            if response.numerator.is_zero():
-                continue
-            size = float(fraction(source.radius)) * self._sum(response).upper
-            total = response.total
-            shift = 0.0 if total is None else float(fraction(source.mean * total))
-            # the two may cancel: what their conversions and products rounded is far below this part of either
-            slack = (size + abs(shift)) * 2.0**-48
-            up = _up(up + _up(size + shift + slack))
-            down = _up(down + _up(size - shift + slack))
-        return up, down
-
-    @cached_property
-    def _sums(self) -> dict[RationalResponse, AbsoluteSum]:
-        return {}
-
-    def _sum(self, response: RationalResponse) -> AbsoluteSum:
-        if response not in self._sums:
-            self._sums[response] = absolute_sum(modal_response(response))
-        return self._sums[response]
-
-
-def _up(value: float) -> float:
-    return float(np.nextafter(np.nextafter(value, inf), inf))
-
-
-def _down(value: float) -> float:
-    return -_up(-value)
-
-
 def _not_stable(sampled: Sampled) -> str:
     what = "an integrator or undamped mode never forgets" if sampled.marginal else "the filter is unstable"
     return f"unbounded: {what}, so that only its word limits the output"
@@ -393,17 +191,17 @@ def _output_error(worst: WorstCase, sampled: Sampled, held: Sampled | None) -> O
     rounding = (max(worst.from_rounding(program.output, worst.to_rounding)), 0.0)
     if worst.held:
         rounding = _rounding_with_growth(worst)
-    growth = _up(_up(coefficients[1] + rounding[1]) + sampling[1])
-    for_ever = _up(growth * LIFETIME_SAMPLES)
+    growth = rounded_up(rounded_up(coefficients[1] + rounding[1]) + sampling[1])
+    for_ever = rounded_up(growth * LIFETIME_SAMPLES)
     if for_ever < NOTHING:
-        return OutputError(_up(coefficients[0] + for_ever), rounding[0], sampling[0])
+        return OutputError(rounded_up(coefficients[0] + for_ever), rounding[0], sampling[0])
     return OutputError(coefficients[0], rounding[0], sampling[0], growth)
 
 
 def _with_growth(response: ModalResponse, size: float) -> tuple[float, float]:
     """``size`` times the absolute sum of what decays, and times what stays."""
     rest, constant = without_constant(response)
-    return _up(size * absolute_sum(rest).upper), _up(size * constant)
+    return rounded_up(size * absolute_sum(rest).upper), rounded_up(size * constant)
 
 
 def _rounding_with_growth(worst: WorstCase) -> tuple[float, float]:
@@ -416,7 +214,7 @@ def _rounding_with_growth(worst: WorstCase) -> tuple[float, float]:
             continue
         size = float(fraction(max(abs(source.low), abs(source.high))))
         found = _with_growth(modal_response(response), size)
-        total, growth = _up(total + found[0]), _up(growth + found[1])
+        total, growth = rounded_up(total + found[0]), rounded_up(growth + found[1])
     return total, growth
 
 

@@ -2,11 +2,11 @@
 
 A response is a few exact first samples and then a sum of modes.  It is evaluated in float64 blocks: the powers within a
 block and the weight of each mode at the start of a block come from balls, so that no error accumulates; what float64
-rounds is bounded and added; what comes after the last block is bounded by a geometric series.
+rounds is bounded and added; what comes after the last block is summed in closed form, or bounded by geometric series.
 """
 
 from collections.abc import Iterator, Sequence
-from functools import lru_cache
+from functools import cached_property, lru_cache
 from math import comb, inf, isfinite
 
 import numpy as np
@@ -22,10 +22,11 @@ from afterkick.numbers import certified, working_bits
 __all__ = ["AbsoluteSum", "ModalResponse", "absolute_sum", "difference", "modal_response", "values", "without_constant"]
 
 BLOCK = 4096
-LONGEST = 1 << 23
-"""Samples after which the tail bound is taken as it is."""
-TAIL = 2.0**-24
-"""Of the sum, what the tail may add, unless LONGEST comes first."""
+LONG, LONGEST = 1 << 16, 1 << 20
+"""Samples after which less will do, and after which the tail is taken as it is: where one mode outlives the others, its
+upper limit is then too large by half at most."""
+TAIL, LONG_TAIL = 2.0**-24, 2.0**-12
+"""Of the sum, what the limits of the tail may be apart, before and after LONG."""
 UNIT_ROUNDOFF = 2.0**-53
 POWER_BITS = 192
 
@@ -105,12 +106,17 @@ def absolute_sum(response: ModalResponse) -> AbsoluteSum:
     squares = sum(float(value.mid()) ** 2 for value in response.first)
     if not response.modes:
         return AbsoluteSum(lower, upper, squares)
-    start = len(response.first)
+    blocks = _Blocks(response.modes)
+    start, looked_at = len(response.first), 0
     while True:
-        tail = _tail(response.modes, start)
-        if tail <= TAIL * lower or start >= LONGEST:
-            return AbsoluteSum(lower, _up(upper + tail), squares)
-        block, slack = _block(response.modes, start)
+        if start >= looked_at + looked_at // 8:
+            looked_at = start
+            least, most = _tail(response.modes, start)
+            enough = TAIL if start < LONG else LONG_TAIL
+            if most - least <= enough * (lower + least) or start >= LONGEST:
+                late = _tail_squares(response.modes, start) if most > TAIL * lower else 0.0
+                return AbsoluteSum(_down(lower + least), _up(upper + most), squares + late)
+        block, slack = blocks.at(start)
         if not isfinite(slack):
             return AbsoluteSum(lower, inf, inf)
         total = float(np.sum(np.abs(block)))
@@ -124,9 +130,10 @@ def absolute_sum(response: ModalResponse) -> AbsoluteSum:
 def values(response: ModalResponse, number: int) -> Floats:
     """h[0] .. h[number-1] in float64, an estimate good to the slack of the blocks."""
     parts = [np.array([float(value.mid()) for value in response.first])]
+    blocks = _Blocks(response.modes)
     start = len(response.first)
     while start < number and response.modes:
-        parts.append(_block(response.modes, start)[0])
+        parts.append(blocks.at(start)[0])
         start += BLOCK
     found = np.zeros(number)
     known = np.concatenate(parts)[:number]
@@ -161,36 +168,53 @@ def _extended(response: ModalResponse, length: int) -> Iterator[arb]:
         yield total
 
 
-def _block(modes: Sequence[Mode], start: int) -> tuple[Floats, float]:
-    """h[start] .. h[start + BLOCK - 1] without the first samples, and a bound of the sum of their errors.
+@frozen(eq=False)
+class _Blocks:
+    """Samples of modes, BLOCK at a time."""
 
-    Beyond the range of doubles the bound is infinite.
-    """
-    k0 = start - 1
-    weights: list[complex] = []
-    radii: list[float] = []
-    tables: list[NDArray[np.complex128]] = []
-    with working_bits(POWER_BITS):
-        for mode in modes:
-            scale = 1 if mode.real else 2
-            times = len(mode.coefficients)
-            powers = [mode.pole ** (k0 - d) if k0 >= d else acb(0) for d in range(times)]
-            for i in range(times):
-                parts = (mode.coefficients[j] * comb(k0, j - i) * powers[j - i] for j in range(i, times))
-                weight = sum(parts, acb(0)) * scale
-                weights.append(_to_complex(weight))
-                radii.append(_up(float(weight.rad().upper())))
-                tables.append(_powers(*_exact_parts(mode.pole), i))
-    factor, table = np.array(weights), np.array(tables)
-    if not np.all(np.isfinite(factor)):
-        return np.zeros(BLOCK), inf
-    found: Floats = factor.real @ table.real - factor.imag @ table.imag
-    lengths = np.sum(np.abs(table), axis=1)
-    sizes = float(np.abs(factor) @ lengths)
-    # conversions to float64 (one round-off each), products and sums: each at most so many round-offs of the sizes;
-    # then the radii of the weights; the last term is for powers that underflow
-    slack = (2 * len(weights) + 16) * UNIT_ROUNDOFF * sizes + float(np.array(radii) @ lengths)
-    return found, slack * (1 + 1e-9) + 1e-280 * float(np.sum(np.abs(factor)))
+    modes: tuple[Mode, ...]
+
+    @cached_property
+    def _table(self) -> NDArray[np.complex128]:
+        """C(k, i) p^(k - i), a row for each mode and each i."""
+        with working_bits(POWER_BITS):
+            parts = [(_exact_parts(mode.pole), len(mode.coefficients)) for mode in self.modes]
+        return np.array([_powers(*pole, i) for pole, times in parts for i in range(times)])
+
+    @cached_property
+    def _parts(self) -> tuple[Floats, Floats, Floats]:
+        """The table's real and imaginary parts, and the absolute sums of its rows."""
+        table = self._table
+        return np.ascontiguousarray(table.real), np.ascontiguousarray(table.imag), np.sum(np.abs(table), axis=1)
+
+    def at(self, start: int) -> tuple[Floats, float]:
+        """h[start] .. h[start + BLOCK - 1] without the first samples, and a bound of the sum of their errors.
+
+        Beyond the range of doubles the bound is infinite.
+        """
+        k0 = start - 1
+        weights: list[complex] = []
+        radii: list[float] = []
+        with working_bits(POWER_BITS):
+            for mode in self.modes:
+                scale = 1 if mode.real else 2
+                times = len(mode.coefficients)
+                powers = [mode.pole ** (k0 - d) if k0 >= d else acb(0) for d in range(times)]
+                for i in range(times):
+                    parts = (mode.coefficients[j] * comb(k0, j - i) * powers[j - i] for j in range(i, times))
+                    weight = sum(parts, acb(0)) * scale
+                    weights.append(_to_complex(weight))
+                    radii.append(_up(float(weight.rad().upper())))
+        factor = np.array(weights)
+        if not np.all(np.isfinite(factor)):
+            return np.zeros(BLOCK), inf
+        real, imaginary, lengths = self._parts
+        found: Floats = factor.real @ real - factor.imag @ imaginary
+        sizes = float(np.abs(factor) @ lengths)
+        # conversions to float64 (one round-off each), products and sums: each at most so many round-offs of the sizes;
+        # then the radii of the weights; the last term is for powers that underflow
+        slack = (2 * len(weights) + 16) * UNIT_ROUNDOFF * sizes + float(np.array(radii) @ lengths)
+        return found, slack * (1 + 1e-9) + 1e-280 * float(np.sum(np.abs(factor)))
 
 
 def _to_complex(value: acb) -> complex:
@@ -223,18 +247,81 @@ def _ball(mid: tuple[int, int], radius: tuple[int, int]) -> arb:
     return arb(arb(mid[0]) * arb(2) ** mid[1], arb(radius[0]) * arb(2) ** radius[1])
 
 
-def _tail(modes: Sequence[Mode], start: int) -> float:
-    """A bound of the absolute sum from ``start`` on: terms C(k, j) r^(k-j) grow by at most q = (K+1)/(K+1-j) r."""
+def _tail(modes: Sequence[Mode], start: int) -> tuple[float, float]:
+    """Limits of the absolute sum from ``start`` on."""
     k0 = start - 1
-    total = arb(0)
+    with working_bits(POWER_BITS):
+        plain = [mode for mode in modes if mode.real and len(mode.coefficients) == 1 and mode.pole.real > 0]
+        closed = _one_sign(plain, k0)
+        if closed is None:
+            return 0.0, _up(float(_rest(modes, k0).upper()))
+        rest = _rest([mode for mode in modes if mode not in plain], k0)
+        return _down(float((closed - rest).lower())), _up(float((closed + rest).upper()))
+
+
+def _one_sign(modes: Sequence[Mode], k0: int) -> arb | None:
+    """The absolute sum of sum over i of c_i p_i^k, k >= k0, where that is certain never to change its sign.
+
+    It does not where the partial sums at k0, the slowest first, all have one sign (summation by parts).
+    """
+    total, partial, signs = arb(0), arb(0), set()
+    for mode in sorted(modes, key=lambda mode: -float(mode.pole.real.mid())):
+        now = mode.coefficients[0].real * mode.pole.real**k0
+        partial += now
+        total += now / (1 - mode.pole.real)
+        signs.add(1 if partial > 0 else -1 if partial < 0 else 0)
+    return abs(total) if len(signs - {0}) <= 1 and 0 not in signs else None
+
+
+def _rest(modes: Sequence[Mode], k0: int) -> arb:
+    """A bound of the absolute sum from k0 on; modes that nearly cancel, as of a filter and its integers, in pairs."""
+    total, single = arb(0), [mode for mode in modes if len(mode.coefficients) == 1]
     for mode in modes:
-        radius = abs(mode.pole).upper()
-        for j, coefficient in enumerate(mode.coefficients):
-            if k0 < j:
-                return inf
-            q = radius * (k0 + 1) / (k0 + 1 - j)
-            if not q < 1:
-                return inf
-            size = abs(coefficient).upper() * (1 if mode.real else 2)
-            total += size * comb(k0, j) * radius ** (k0 - j) / (1 - q)
-    return _up(float(total.upper()))
+        if len(mode.coefficients) > 1:
+            total += _geometric(mode, k0)
+    while single:
+        mode = single.pop()
+        alone = _geometric(mode, k0)
+        partner = min(single, key=lambda other: float(abs(other.pole - mode.pole).mid()), default=None)
+        if partner is not None and mode.real == partner.real:
+            together = _difference(mode, partner, k0)
+            if together < alone + _geometric(partner, k0):
+                single.remove(partner)
+                alone = together
+        total += alone
+    return total
+
+
+def _geometric(mode: Mode, k0: int) -> arb:
+    """Terms C(k, j) r^(k-j) grow by at most q = (k0+1)/(k0+1-j) r from one to the next."""
+    total = arb(0)
+    radius = abs(mode.pole).upper()
+    for j, coefficient in enumerate(mode.coefficients):
+        q = radius * (k0 + 1) / (k0 + 1 - j) if k0 >= j else arb(1)
+        if not q < 1:
+            return arb(inf)
+        size = abs(coefficient).upper() * (1 if mode.real else 2)
+        total += size * comb(k0, j) * radius ** (k0 - j) / (1 - q)
+    return total
+
+
+def _difference(one: Mode, other: Mode, k0: int) -> arb:
+    """|a p^k + b q^k| is at most |a + b| r^k + |b| k |p - q| r^(k-1), r the larger radius; summed from k0 on."""
+    r = abs(one.pole).upper().max(abs(other.pole).upper())
+    if not r < 1 or k0 < 1:
+        return arb(inf)
+    a, b = one.coefficients[0], other.coefficients[0]
+    apart = abs(a + b) * r**k0 / (1 - r)
+    apart += abs(b) * abs(one.pole - other.pole) * r ** (k0 - 1) * (k0 * (1 - r) + r) / (1 - r) ** 2
+    return apart * (1 if one.real else 2)
+
+
+def _tail_squares(modes: Sequence[Mode], start: int) -> float:
+    """Of sum over n of h[n]^2 from ``start`` on, an estimate: products of modes two by two."""
+    k0 = start - 1
+    single = [mode for mode in modes if len(mode.coefficients) == 1]
+    both = [(mode.pole, mode.coefficients[0]) for mode in single]
+    both += [(mode.pole.conjugate(), mode.coefficients[0].conjugate()) for mode in single if not mode.real]
+    with working_bits(POWER_BITS):
+        total = sum((a * b * (p * q) ** k0 / (1 - p * q) for p, a in both for q, b in both), acb(0))
+    return max(float(total.real.mid()), 0.0)

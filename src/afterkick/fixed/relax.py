@@ -20,7 +20,6 @@ from math import ceil, floor, isfinite
 from attrs import evolve, frozen
 
 from afterkick.errors import Problem, Refused
-from afterkick.fixed.bounds import WordRange, WorstCase
 from afterkick.fixed.narrow import residue_limits
 from afterkick.fixed.program import (
     Move,
@@ -37,6 +36,7 @@ from afterkick.fixed.program import (
 )
 from afterkick.fixed.ranges import Interval, analyse, require_valid
 from afterkick.fixed.remedies import scale_remedies
+from afterkick.fixed.worst_case import WordRange, WorstCase
 
 __all__ = ["Relaxation", "relax"]
 
@@ -50,7 +50,7 @@ Ranges = dict[str, Interval]
 def relax(program: Program, ranges: tuple[WordRange, ...]) -> Program:
     """``program`` without the saturation and the width that ``ranges`` prove idle, its error feedback folded away.
 
-    ``ranges`` are :attr:`WorstCase.ranges <afterkick.fixed.bounds.WorstCase.ranges>` of this program.  A word is proved
+    ``ranges`` are :attr:`afterkick.fixed.worst_case.WorstCase.ranges` of this program.  A word is proved
     where neither it nor any word that has an influence on it can overflow, by these or by interval arithmetic.  The
     result gives the same outputs, integer for integer, for all inputs within the promised peak; others are not accepted
     any more.  A sum whose error feedback can't be folded, because the sum needs 64 bits or the carried one would not

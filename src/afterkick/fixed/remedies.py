@@ -3,8 +3,8 @@
 from collections.abc import Iterable
 from math import isfinite
 
-from afterkick.fixed.bounds import WordRange
 from afterkick.fixed.program import Program
+from afterkick.fixed.worst_case import WordRange
 from afterkick.numbers import nearest_float
 
 __all__ = ["scale_remedies"]

@@ -18,7 +18,6 @@ from typing import TYPE_CHECKING, Protocol
 from attrs import evolve, frozen
 
 from afterkick.errors import Problem, Refused
-from afterkick.fixed.bounds import WorstCase
 from afterkick.fixed.carry import WIDEST_ACCUMULATOR, with_carry
 from afterkick.fixed.coupled import coupled_program
 from afterkick.fixed.delta import delta_program
@@ -28,12 +27,13 @@ from afterkick.fixed.program import Program, Role, Sum
 from afterkick.fixed.ranges import analyse
 from afterkick.fixed.relax import Relaxation, relax
 from afterkick.fixed.transposed import transposed_program
+from afterkick.fixed.worst_case import WorstCase
 
 if TYPE_CHECKING:
     from afterkick.design.schema import Arithmetic, Signals
     from afterkick.sampling.sampled import Sampled
 
-__all__ = ["Candidate", "Judge", "build_program", "candidates", "chosen", "operations", "state_bytes"]
+__all__ = ["CARRIED", "Candidate", "Judge", "build_program", "candidates", "chosen", "operations", "state_bytes"]
 
 BITS_OF_REGISTER = 32
 CARRIES = (0, 1, 2)
