@@ -9,13 +9,15 @@ from flint import fmpq
 
 from afterkick.design.digest import digest
 from afterkick.design.schema import Design, Sampling
+from afterkick.errors import Refused
+from afterkick.fixed.arrangement import Arranged, arranged
 from afterkick.fixed.bounds import Bounds, bounds
 from afterkick.fixed.choice import ChoiceReport, choice_report
 from afterkick.fixed.program import Program, quantised_dc_gain
 from afterkick.fixed.realised import realised
 from afterkick.fixed.relax import Relaxation
 from afterkick.fixed.settled import StepOffset, settled_offsets, step_codes
-from afterkick.fixed.structures import Candidate, candidates, chosen
+from afterkick.fixed.structures import CARRIED, Candidate, candidates, chosen
 from afterkick.model.forms import model_of
 from afterkick.model.model import Model
 from afterkick.numbers import fraction
@@ -39,6 +41,8 @@ class BudgetLine:
     found: float | None
     """In the unit of the item's name; None where it was not judged."""
     remark: str = ""
+    judged_by: str = ""
+    """The command that judges the line, where it is not this road: the verdict leaves it out."""
 
     @property
     def holds(self) -> bool | None:
@@ -62,6 +66,8 @@ class FixedPoint:
     """What the proof saved; None where the design doesn't ask for it."""
     settled: tuple[StepOffset, ...]
     """Steps of several sizes; none where nothing is proved, or the filter integrates."""
+    arrangement: Arranged | None
+    """Of the sections, where it is not that of the rule."""
 
 
 @frozen(eq=False)
@@ -91,7 +97,7 @@ class Assessment:
     @cached_property
     def verdict(self) -> str:
         """``holds``, ``falls short``, or ``unknown`` where no line falls short but one was not judged."""
-        judged = [line.holds for line in self.budget]
+        judged = [line.holds for line in self.budget if not line.judged_by]
         if False in judged or self.sampled.model.stability == "unstable":
             return FALLS_SHORT
         return UNKNOWN if None in judged else HOLDS
@@ -108,6 +114,8 @@ def assess(design: Design) -> Assessment:
     realise = _single_precision if design.arithmetic.kind == "float32" else _fixed_point
     realisation, shipped, budget = realise(design, sampled, mark)
     errors = response_errors(sampled, design.budget.band_hz)
+    if isinstance(realisation, FixedPoint) and realisation.arrangement is not None:
+        sampled = realisation.arrangement.sampled
     return Assessment(design, model, sampled, mark, errors, realisation, shipped, tuple(budget))
 
 
@@ -124,22 +132,35 @@ def _fixed_point(
         return shipped, proofs, _budget_lines(design, model, shipped, _proved_figures(proofs))
 
     def shortfalls(program: Program) -> list[str]:
-        return [line.item for line in judged(program)[2] if not line.holds and line.item != "instructions"]
+        return [line.item for line in judged(program)[2] if not line.holds and not line.judged_by]
 
-    road = (sampled, design.arithmetic, design.signals, design.design.name)
-    listed = candidates(*road, title=design.design.title, digest=mark, judge=shortfalls)
+    def listed_for(filtered: Sampled) -> tuple[Candidate, ...]:
+        road = (filtered, design.arithmetic, design.signals, design.design.name)
+        return candidates(*road, title=design.design.title, digest=mark, judge=shortfalls)
+
+    # the other structures keep more bits between the sections
+    rounds_between = design.arithmetic.structure in (*CARRIED, "auto")
+    arrangement = arranged(sampled, design.arithmetic, design.signals) if rounds_between else None
+    try:
+        listed = listed_for(sampled if arrangement is None else arrangement.sampled)
+    except Refused:
+        if arrangement is None:
+            raise
+        arrangement, listed = None, listed_for(sampled)
+    in_sections = sampled if arrangement is None else arrangement.sampled
     program = chosen(listed)
     shipped, proofs, budget = judged(program)
     found = FixedPoint(
         program,
         quantised_dc_gain(program),
-        choice_report(program, sampled) if program.structure in ("direct", "transposed") else None,
+        choice_report(program, in_sections) if program.structure in CARRIED else None,
         listed if design.arithmetic.structure == "auto" else (),
         proofs,
         next(one.relaxation for one in listed if one.program is program),
         settled_offsets(program, sampled, proofs.rounding, step_codes(program, proofs.peak_code))
         if proofs.rounding is not None
         else (),
+        arrangement,
     )
     return found, shipped, budget
 
@@ -180,11 +201,15 @@ def _budget_lines(
         "phase_deg": _largest(band.phase_deg, band.phase_at_hz),
         "dc_gain_ppm": _dc_gain_ppm(model, shipped),
     }
-    found |= counts | {"instructions": (None, "not supported yet")}
+    found |= counts
     limits = {item: getattr(design.budget, item) for item in found}
-    return [
+    lines = [
         BudgetLine(item, float(fraction(limit)), *found[item]) for item, limit in limits.items() if limit is not None
     ]
+    if design.budget.instructions is not None:
+        limit = float(fraction(design.budget.instructions))
+        lines.append(BudgetLine("instructions", limit, None, judged_by="bench"))
+    return lines
 
 
 def _proved_figures(proofs: Bounds) -> dict[str, tuple[float | None, str]]:

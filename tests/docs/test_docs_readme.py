@@ -11,7 +11,7 @@ import attrs
 import click
 import pytest
 
-from afterkick.bench.host import find_compiler
+from afterkick.bench.compilers import find_compiler
 from afterkick.cli import main
 from afterkick.design import schema
 from afterkick.design.limits import Choice

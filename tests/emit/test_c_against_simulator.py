@@ -16,7 +16,7 @@ import pytest
 from attrs import evolve
 
 from afterkick.bench import compile_on_host, run_on_host
-from afterkick.bench.host import find_compiler
+from afterkick.bench.compilers import find_compiler
 from afterkick.emit import emit_c
 from afterkick.errors import Lacking, Refused
 from afterkick.fixed import simulate

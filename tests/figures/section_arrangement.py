@@ -130,7 +130,8 @@ def main() -> int:
         print(f"  ratio       {quartiles(ratios)}, least {min(ratios):.3g}, largest {max(ratios):.3g}")
         print(f"  the search's own estimate is off by at most {100 * off:.2g} %")
         counts = [sum(row.proved_by_rule for row in rows), sum(row.proved for row in rows)]
-        print(f"  proved never to overflow: {counts[0]} by the rule, {counts[1]} searched")
+        lost = sum(row.proved_by_rule and not row.proved for row in rows)
+        print(f"  proved never to overflow: {counts[0]} by the rule, {counts[1]} searched; {lost} no longer")
         print(f"  time of the search {quartiles([1e3 * row.seconds for row in rows])} ms, ", end="")
         print(f"worst {1e3 * max(row.seconds for row in rows):.0f} ms")
     return int(wrong)

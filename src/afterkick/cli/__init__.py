@@ -18,6 +18,7 @@ _COMMANDS = {
     "check": "Run the whole road on designs and judge their budgets.",
     "kick": "The impulse response as numbers: analytic, sampled, shipped.",
     "emit": "Write the C.",
+    "bench": "Compile the C for its target, run it on an emulated core, compare and count.",
     "targets": "List the target profiles.",
     "tour": "The whole road on the demo designs, for a first look.",
 }

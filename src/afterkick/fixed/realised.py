@@ -21,7 +21,7 @@ def realised(program: Program, sampled: Sampled) -> Sampled:
     """``sampled`` with the transfer function of the program's integers, in output units per input unit."""
     gain = program.output_format.full_scale / program.input_format.full_scale
     sections = _sections(program)
-    return evolve(sampled, attempt=lambda: rational_cascade(sections, gain), warnings=())
+    return evolve(sampled, attempt=lambda: rational_cascade(sections, gain), warnings=(), arrangement=None)
 
 
 def _sections(program: Program) -> list[Section]:

@@ -13,4 +13,4 @@ __all__ = ["realised_float"]
 def realised_float(program: FloatProgram, sampled: Sampled) -> Sampled:
     """``sampled`` with the transfer function of the program's coefficients, in output units per input unit."""
     sections = [(section.exact_b, section.exact_a) for section in program.sections]
-    return evolve(sampled, attempt=lambda: rational_cascade(sections, fmpq(1)), warnings=())
+    return evolve(sampled, attempt=lambda: rational_cascade(sections, fmpq(1)), warnings=(), arrangement=None)

@@ -40,7 +40,14 @@ def check_data(found: Assessment) -> dict[str, Any]:
         "errors": _errors_data(found.errors),
         **_realisation_data(found),
         "budget": [
-            {"item": line.item, "limit": line.limit, "found": line.found, "holds": line.holds, "remark": line.remark}
+            {
+                "item": line.item,
+                "limit": line.limit,
+                "found": line.found,
+                "holds": line.holds,
+                "remark": line.remark,
+                "judged_by": line.judged_by or "check",
+            }
             for line in found.budget
         ],
     }
@@ -169,6 +176,12 @@ def _fixed_data(found: FixedPoint) -> dict[str, Any]:
             }
             for section in program.sections
         ],
+        "arrangement": None
+        if found.arrangement is None
+        else {
+            "noise_rms_estimate_by_rule": found.arrangement.noise_by_rule,
+            "noise_rms_estimate": found.arrangement.noise,
+        },
         "tried": [
             {
                 "structure": one.structure,

@@ -43,11 +43,13 @@ def _verdict_text(found: Assessment) -> str:
         reasons.append("the model is unstable")
     match found.verdict:
         case "holds":
-            return "holds" if found.budget else "holds, as no budget is given"
+            elsewhere = [f"; {line.item}: see {line.judged_by}" for line in found.budget if line.judged_by]
+            given = len(found.budget) > len(elsewhere)
+            return "".join(["holds" if given else "holds, as no budget is given", *elsewhere])
         case "falls short":
             return f"FALLS SHORT: {', '.join(reasons)}"
         case verdict:
-            unjudged = ", ".join(line.item for line in found.budget if line.holds is None)
+            unjudged = ", ".join(line.item for line in found.budget if line.holds is None and not line.judged_by)
             return f"{verdict.upper()}: {unjudged} not judged"
 
 
@@ -144,6 +146,10 @@ def _fixed_lines(found: FixedPoint) -> list[str]:
     for k, section in enumerate(program.sections, start=1):
         shown = _integers(section) if program.structure in ("direct", "transposed") else _named(section)
         lines.append(row(f"  section {k}", shown, formula=True))
+    if found.arrangement is not None:
+        noise, by_rule = number(found.arrangement.noise, 3), number(found.arrangement.noise_by_rule, 3)
+        text = f"paired and ordered anew: rounding noise {noise} counts r.m.s. instead of {by_rule} (estimates)"
+        lines.append(row("  sections", text))
     lines += [_candidate(one, program) for one in found.tried]
     if found.relaxation is not None:
         lines += [row(*labelled) for labelled in relaxation_rows(found.relaxation)]
@@ -257,14 +263,19 @@ def _ppm(errors: ResponseErrors) -> float | None:
 def _budget_lines(budget: Sequence[BudgetLine]) -> list[str]:
     if not budget:
         return [row("budget", "none given: nothing is judged")]
-    words = {True: "holds", False: "FALLS SHORT", None: "not judged"}
     lines = []
     for k, line in enumerate(budget):
         found = "" if line.found is None else f"{line.found:.4g}"
         remark = f"   ({line.remark})" if line.remark else ""
-        text = f"{line.item:<24}{found:>12}  of {line.limit:<10.6g}{words[line.holds]}{remark}"
+        text = f"{line.item:<24}{found:>12}  of {line.limit:<10.6g}{_judged(line)}{remark}"
         lines.append(row("budget" if k == 0 else "", text))
     return lines
+
+
+def _judged(line: BudgetLine) -> str:
+    if line.judged_by:
+        return f"see {line.judged_by}"
+    return {True: "holds", False: "FALLS SHORT", None: "not judged"}[line.holds]
 
 
 def kick_text(design: Design, rows: Kick) -> str:

@@ -17,6 +17,8 @@ from afterkick.sampling.sections import Arrangement, Section, paired
 
 __all__ = ["Arrangement", "ParallelSection", "Sampled", "Section"]
 
+Attempt = Callable[[], PulseTransfer | None]
+
 
 @frozen
 class ParallelSection:
@@ -26,7 +28,8 @@ class ParallelSection:
     a: tuple[arb, arb, arb]
 
 
-# Compared by identity: a Sampled is a description whose numbers are computed, and cached, when asked for.
+# Compared by identity: a Sampled is a description whose numbers are computed when asked for, and cached by what they
+# are computed from.
 @frozen(eq=False)
 class Sampled:
     """z^-delay_samples times a pulse transfer function of ``order`` poles."""
@@ -37,7 +40,7 @@ class Sampled:
     """Whole samples of dead time."""
     fraction_s: fmpq
     """What the whole samples leave of the dead time."""
-    attempt: Callable[[], PulseTransfer | None] = field(repr=False)
+    attempt: Attempt = field(repr=False)
     """The factored pulse transfer function at the present working precision; None: more bits needed."""
     warnings: tuple[str, ...] = ()
     arrangement: Arrangement | None = None
@@ -60,12 +63,12 @@ class Sampled:
 
     def transfer(self, bits: int = 128) -> PulseTransfer:
         """The factored pulse transfer function, with balls of at least ``bits`` working bits."""
-        return _transfer(self, bits)
+        return _transfer(self.attempt, bits)
 
     def sections(self, bits: int) -> tuple[Section, ...]:
         """The cascade: each coefficient exact or within 2^-bits of the largest of its group, 1+a1+a2 within 2^-bits of
         itself, for bits up to 2000: a numerator value that 2048 bits can't tell from zero is taken as zero."""
-        return _sections(self, bits)
+        return _sections(self.attempt, self.arrangement, bits)
 
     @cached_property
     def marginal(self) -> bool:
@@ -80,7 +83,7 @@ class Sampled:
         """Whether every pole is strictly inside the unit circle."""
 
         def magnitudes() -> list[arb]:
-            return [abs(pole.value) - 1 for pole in _compute(self).poles] if not self.marginal else []
+            return [abs(pole.value) - 1 for pole in _compute(self.attempt).poles] if not self.marginal else []
 
         found = certified(
             magnitudes, lambda values: all(bool(v < 0) or bool(v > 0) for v in values), "the radius of a sampled pole"
@@ -92,7 +95,7 @@ class Sampled:
 
         With ``integrations`` = 1 the step response instead.  The whole-sample delay is not included.
         """
-        transfer = _compute(self)
+        transfer = _compute(self.attempt)
         zeros = list(transfer.zeros)
         times = Counter(pole.name for pole in transfer.poles if not is_exactly_zero(pole.value))
         named = {pole.name: pole for pole in transfer.poles if pole.name in times}
@@ -117,7 +120,7 @@ class Sampled:
 
     def first_samples(self, number: int) -> list[arb]:
         """g[0] .. g[number-1] by series division, without the whole-sample delay."""
-        transfer = _compute(self)
+        transfer = _compute(self.attempt)
         numerator = [arb(0)] * transfer.leading + expanded(transfer.zeros)
         denominator = expanded(transfer.poles)
         samples: list[arb] = []
@@ -181,10 +184,10 @@ def _parallel_section(mode: Mode) -> ParallelSection:
     return ParallelSection((2 * residue.real, -2 * (residue * pole.conjugate()).real), (arb(1), -2 * pole.real, square))
 
 
-def _compute(sampled: Sampled) -> PulseTransfer:
+def _compute(attempt: Attempt) -> PulseTransfer:
     """The transfer at the present working precision or the lowest one above it that isolates the zeros."""
     found = certified(
-        sampled.attempt,
+        attempt,
         lambda found: found is not None,
         "the zeros of the sampled filter (a mode very much faster than the rate may be why: leave it out, or take "
         "bilinear or matched)",
@@ -194,9 +197,9 @@ def _compute(sampled: Sampled) -> PulseTransfer:
 
 
 @lru_cache(maxsize=64)
-def _transfer(sampled: Sampled, bits: int) -> PulseTransfer:
+def _transfer(attempt: Attempt, bits: int) -> PulseTransfer:
     def compute() -> PulseTransfer:
-        return _compute(sampled)
+        return _compute(attempt)
 
     def enough(transfer: PulseTransfer) -> bool:
         return all(accurate(root.value, bits // 2) for root in transfer.poles) and accurate(transfer.gain, bits // 2)
@@ -205,10 +208,10 @@ def _transfer(sampled: Sampled, bits: int) -> PulseTransfer:
 
 
 @lru_cache(maxsize=256)
-def _sections(sampled: Sampled, bits: int) -> tuple[Section, ...]:
+def _sections(attempt: Attempt, arrangement: Arrangement | None, bits: int) -> tuple[Section, ...]:
     def compute() -> tuple[Section, ...] | None:
-        transfer = sampled.attempt()
-        return None if transfer is None else paired(transfer, sampled.arrangement)
+        transfer = attempt()
+        return None if transfer is None else paired(transfer, arrangement)
 
     def enough(sections: tuple[Section, ...] | None) -> bool:
         return sections is not None and all(

@@ -73,7 +73,7 @@ def in_order(roots: Sequence[ZRoot]) -> list[ZRoot] | None:
         return None
     keyed = sorted(
         ((root.value.real + root.value.imag / arb(2).sqrt(), root) for root in roots),
-        key=lambda each: mid_float(each[0]),
+        key=lambda each: each[0].mid(),
     )
     if any(low.overlaps(high) and not same(one, other) for (low, one), (high, other) in pairwise(keyed)):
         return None
