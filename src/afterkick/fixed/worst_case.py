@@ -60,8 +60,13 @@ class SumRange:
     accumulator_bits: int
 
     @property
+    def bits(self) -> int:
+        """That it takes, the sign included; no program is built that has fewer."""
+        return self.partial_sum.bit_length() + 1
+
+    @property
     def filling(self) -> float:
-        """The part of the accumulator that is taken; at most 1, as no program is built otherwise."""
+        """The part of the accumulator that is taken; at most 1."""
         return self.partial_sum / ((1 << (self.accumulator_bits - 1)) - 1)
 
 

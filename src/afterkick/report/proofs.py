@@ -70,8 +70,8 @@ def proof_rows(bounds: Bounds, program: Program) -> list[tuple[str, str]]:
             fullest = max(free, key=lambda word: word.filling)
             text += f"; the fullest is {fullest.word}, {100 * fullest.filling:.4g} % full"
         fullest_sum = max(bounds.sums, key=lambda one: one.filling)
-        text += f"; of the sums that of {fullest_sum.word}, {100 * fullest_sum.filling:.4g} %"
-        text += f" of {fullest_sum.accumulator_bits} bits"
+        text += f"; the fullest sum, for {fullest_sum.word}, takes {fullest_sum.bits} of"
+        text += f" {fullest_sum.accumulator_bits} bits"
         rows.append(("bounds", text))
         if bounds.clamped:
             names = ", ".join(word.word for word in bounds.clamped)
