@@ -199,21 +199,23 @@ class _Search:
         norms = np.pad(norms, (0, 1))
         tails = np.pad(self._tails, (0, 1))
         choice = np.zeros((*shape, 2), dtype=np.int64)
-        barred = np.where(self._may_join, 0.0, np.inf)[:, None, :, None]
+        usable = np.flatnonzero(np.any(self._may_join, axis=0))
+        barred = np.where(self._may_join[:, usable], 0.0, np.inf)[:, None, :, None]
         depths = poles.counts.sum(axis=1)
         for depth in reversed(range(depths[-1])):
             rows = np.flatnonzero(depths == depth)
             spare = poles.state_degrees[rows, None] - zeros.state_degrees
             columns = np.flatnonzero(np.any((spare >= 0) & (spare <= self._slack), axis=0))
-            then, after = poles.after[:, rows], zeros.after[:, columns]
+            then, after = poles.after[:, rows], zeros.after[np.ix_(usable, columns)]
             weight = self._weight(norms[then] + ROOM, behind[then]) if depth < depths[-1] - 1 else 0.0
             total = np.round(np.logaddexp2(cost[then], 2.0 * weight + tails[rows]), DECIMALS)
             reached = (total[:, :, after] + barred).transpose(1, 3, 0, 2).reshape(len(rows), len(columns), -1)
             ours, theirs = np.divmod(np.argmin(reached, axis=2), len(after))
             at = np.ix_(rows, columns)
             cost[at] = np.min(reached, axis=2)
-            choice[at] = np.stack([ours, theirs], axis=2)
             before = then[ours, np.arange(len(rows))[:, None]], after[theirs, np.arange(len(columns))]
+            theirs = usable[theirs]
+            choice[at] = np.stack([ours, theirs], axis=2)
             behind[at] = behind[before] + self._scales[ours, theirs]
         if not math.isfinite(cost[0, 0]):
             return None
@@ -232,9 +234,8 @@ class _Search:
     @cached_property
     def _may_join(self) -> NDArray[np.bool_]:
         """Whether a section may have an option of the poles and one of the zeros."""
-        degrees = np.array(self.poles.degrees)[:, None]
-        spare = degrees - np.array(self.zeros.degrees)
-        found: NDArray[np.bool_] = (spare >= 0) & (spare <= self._slack) & (degrees > 0)
+        spare = np.array(self.poles.degrees)[:, None] - np.array(self.zeros.degrees)
+        found: NDArray[np.bool_] = (spare >= 0) & (spare <= self._slack)
         return found
 
     @cached_property

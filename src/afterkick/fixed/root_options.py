@@ -46,7 +46,8 @@ class RootOptions:
 
     @classmethod
     def of(cls, roots: Sequence[ZRoot], rule: Sequence[Sequence[ZRoot]], grouped: bool = False) -> "RootOptions":
-        """Of roots in order: ``grouped`` as by the rule, or one by one unless these are too many."""
+        """Of roots in order: ``grouped`` as by the rule, a group for each section; or one by one unless these are too
+        many, and any section may go without."""
         starts = [i for i, root in enumerate(roots) if i == 0 or not same(roots[i - 1], root)]
         own = cls(tuple(roots[i] for i in starts), tuple(starts), (), (), ())
         groups = [group for group in map(own.kinds_of, rule) if group]
@@ -54,7 +55,8 @@ class RootOptions:
         single = not grouped and math.prod(singles.count(one) + 1 for one in set(singles)) <= MOST_STATES
         listed = sorted(singles if single else groups)
         units = tuple(dict.fromkeys(listed))
-        options: list[tuple[int, ...]] = [(), *((unit,) for unit in range(len(units)))]
+        options: list[tuple[int, ...]] = [] if grouped else [()]
+        options += [(unit,) for unit in range(len(units))]
         if single:
             real = [unit for unit, (kind,) in enumerate(units) if own.kinds[kind].real]
             options += combinations_with_replacement(real, 2)
