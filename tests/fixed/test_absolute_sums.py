@@ -9,10 +9,12 @@ import math
 
 import mpmath
 import pytest
-from flint import fmpq, fmpq_poly
+from flint import acb, arb, fmpq, fmpq_poly
 
 from afterkick.fixed.linear import RationalResponse
-from afterkick.fixed.modal_sums import _Blocks, absolute_sum, difference, modal_response, values
+from afterkick.fixed.modal_sums import ModalResponse, _Blocks, absolute_sum, difference, modal_response, values
+from afterkick.model.partial_fractions import Mode
+from afterkick.numbers import working_bits
 
 # sum |h| of 1 / (1 - 2 r cos(pi/N)/z + r^2/z^2), r = 0.95
 ALL_POLE_SUMS = {2: 10.256410256410254, 3: 13.672217353198938, 4: 17.49925743726912, 6: 25.480426379755084}
@@ -124,3 +126,18 @@ def test_a_late_block_is_within_its_slack() -> None:
         pole = mpmath.mpf(999999) / 1000000
         error = sum(abs(mpmath.mpf(float(value)) - pole ** (start + k)) for k, value in enumerate(block))
     assert error <= slack <= 1e-13 * float(block.sum())
+
+
+@pytest.mark.parametrize("slower_first", [False, True])
+def test_poles_that_doubles_can_not_tell_apart(slower_first: bool) -> None:
+    """p^k - (1 - 10^-9) q^k changes its sign late, as q is slower than p by 10^-18; its sum is far from the closed form
+    of a response that keeps its sign."""
+    with working_bits(256):
+        one = Mode(acb(arb(1 - fmpq(1, 10**9))), True, (acb(1),))
+        slower = one.pole + arb(fmpq(1, 10**18))
+        other = Mode(slower, True, (acb(-(1 - fmpq(1, 10**9))),))
+        modes = (other, one) if slower_first else (one, other)
+        early = sum(
+            float(abs(one.pole.real**k - (1 - fmpq(1, 10**9)) * slower.real**k).mid()) for k in range(0, 10**5, 1000)
+        )
+    assert absolute_sum(ModalResponse((arb(0),), modes)).upper > 999 * early

@@ -7,6 +7,7 @@ rounds is bounded and added; what comes after the last block is summed in closed
 
 from collections.abc import Iterator, Sequence
 from functools import cached_property, lru_cache
+from itertools import pairwise
 from math import comb, inf, isfinite
 
 import numpy as np
@@ -262,10 +263,14 @@ def _tail(modes: Sequence[Mode], start: int) -> tuple[float, float]:
 def _one_sign(modes: Sequence[Mode], k0: int) -> arb | None:
     """The absolute sum of sum over i of c_i p_i^k, k >= k0, where that is certain never to change its sign.
 
-    It does not where the partial sums at k0, the slowest first, all have one sign (summation by parts).
+    It does not where the partial sums at k0, the slowest first, all have one sign (summation by parts).  Which is the
+    slowest must be certain: a filter and its integers have poles that doubles can't tell apart.
     """
     total, partial, signs = arb(0), arb(0), set()
-    for mode in sorted(modes, key=lambda mode: -float(mode.pole.real.mid())):
+    slowest_first = sorted(modes, key=lambda mode: mode.pole.real.mid(), reverse=True)
+    if not all(bool(one.pole.real >= other.pole.real) for one, other in pairwise(slowest_first)):
+        return None
+    for mode in slowest_first:
         now = mode.coefficients[0].real * mode.pole.real**k0
         partial += now
         total += now / (1 - mode.pole.real)
