@@ -4,11 +4,15 @@ Every message names where (a key, a block, a file), what was found, what is acce
 several problems reports all of them at once.
 """
 
-from collections.abc import Iterable
+from collections.abc import Callable, Iterable
+from typing import TypeVar
 
 from attrs import frozen
 
-__all__ = ["AfterkickError", "Lacking", "Problem", "Refused", "Uncertified"]
+__all__ = ["AfterkickError", "Lacking", "Problem", "Refused", "Uncertified", "each"]
+
+Item = TypeVar("Item")
+Result = TypeVar("Result")
 
 
 @frozen
@@ -44,3 +48,19 @@ class Uncertified(AfterkickError):
 
 class Lacking(AfterkickError):
     """This machine lacks something, a compiler for example: exit code 3."""
+
+
+def each(make: Callable[[Item], Result], items: Iterable[Item], problems: Iterable[Problem] = ()) -> list[Result]:
+    """``make`` of every item.
+
+    :raises Refused: with ``problems``, and what was refused of any item.
+    """
+    found, made = list(problems), []
+    for item in items:
+        try:
+            made.append(make(item))
+        except Refused as refusal:
+            found += refusal.problems
+    if found:
+        raise Refused(found)
+    return made

@@ -183,14 +183,12 @@ def _unbounded(words: tuple[WordRange, ...]) -> str:
 def _output_error(worst: WorstCase, sampled: Sampled, held: Sampled | None) -> OutputError:
     program, peak = worst.program, worst.peak_code
     scale = program.input_format.full_scale / program.output_format.full_scale
-    response = worst.closed.responses(None)[program.output] if worst.held else worst.to_input[program.output]
+    response = worst.closed_to_input[program.output]
     late = RationalResponse(response.numerator.right_shift(program.delay_samples), response.denominator)
     exact = exact_response(sampled, scale)
     coefficients = _with_growth(difference(modal_response(late), exact), peak)
     sampling = (0.0, 0.0) if held is None else _with_growth(difference(exact, exact_response(held, scale)), peak)
-    rounding = (max(worst.from_rounding(program.output, worst.to_rounding)), 0.0)
-    if worst.held:
-        rounding = _rounding_with_growth(worst)
+    rounding = _rounding_with_growth(worst) if worst.held else (max(worst.from_rounding(program.output)), 0.0)
     growth = rounded_up(rounded_up(coefficients[1] + rounding[1]) + sampling[1])
     for_ever = rounded_up(growth * LIFETIME_SAMPLES)
     if for_ever < NOTHING:
@@ -230,7 +228,7 @@ def _integration(worst: WorstCase) -> Integration | None:
         return None
     step = driving[0]
     factor = abs(sum(term.factor for term in step.terms))
-    per_sample = without_constant(modal_response(worst.closed.responses(None)[program.output]))[1]
+    per_sample = without_constant(modal_response(worst.closed_to_input[program.output]))[1]
     if factor == 0:
         return None
     smallest = 1

@@ -305,18 +305,7 @@ def _attempt(
             strict=True,
         )
         coefficients = _coefficients(rows)
-    return Core(
-        tuple(sheet.words),
-        tuple(sheet.sums),
-        first,
-        wide,
-        bits_of(sheet.ranges[wide]),
-        fractions[0],
-        *b,
-        a,
-        a_bits,
-        coefficients,
-    )
+    return sheet.core(first, wide, (*b, a, a_bits), coefficients)
 
 
 def _on_grid(section: ExactSection, name: str, grid: int) -> int:

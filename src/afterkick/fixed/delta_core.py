@@ -299,17 +299,8 @@ def _core(
         limits = frame.limits if section.pole_at_one and state == wide else None
         if not sheet.state(state, (state, difference), limits):
             return None
-    return Core(
-        tuple(sheet.words),
-        tuple(sheet.sums),
-        first,
-        wide,
-        bits_of(sheet.ranges[wide]),
-        fractions[0],
-        *integers.transfer,
-        _coefficients(section, integers, fractions),
-        _steady(section, sheet, integers, states),
-    )
+    rows = _coefficients(section, integers, fractions)
+    return sheet.core(first, wide, integers.transfer, rows, _steady(section, sheet, integers, states))
 
 
 def _nothing_taken_in(number: int, state: Interval) -> Refused:

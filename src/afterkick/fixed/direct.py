@@ -10,7 +10,7 @@ from typing import TYPE_CHECKING
 from attrs import frozen
 from flint import fmpq
 
-from afterkick.errors import Problem, Refused
+from afterkick.errors import Problem, Refused, each
 from afterkick.fixed.cascade import (
     SCALING_BITS,
     Builder,
@@ -23,7 +23,7 @@ from afterkick.fixed.cascade import (
     signal_words,
     unsupported,
 )
-from afterkick.fixed.kept import exact_dc_gain
+from afterkick.fixed.kept import exact_code_gain
 from afterkick.fixed.program import (
     Program,
     ProgramSection,
@@ -78,16 +78,9 @@ def direct_program(
         raise Refused(problems)
     sections, exponents = scaled(exact_sections(sampled), arithmetic.scaling, signals)
     builder = Builder.of(arithmetic)
-    plans: list[_Plan] = []
-    for section in sections:
-        try:
-            plans.append(_plan(section, builder))
-        except Refused as refusal:
-            problems += refusal.problems
-    if problems:
-        raise Refused(problems)
+    plans = each(lambda section: _plan(section, builder), sections)
     if search:
-        sections, plans = _searched(sections, plans, builder, _dc_gain(sampled, signals))
+        sections, plans = _searched(sections, plans, builder, exact_code_gain(sampled, signals))
     return finished(
         _wire(sections, plans, exponents, builder, sampled.delay_samples),
         "direct",
@@ -167,12 +160,6 @@ def _plan(section: ExactSection, builder: Builder) -> _Plan:
             "accumulator_bits = 64, narrower data, or a larger output full scale",
         )
     )
-
-
-def _dc_gain(sampled: "Sampled", signals: "Signals") -> fmpq | None:
-    """The exact gain at z = 1 of the codes, where it is known."""
-    gain = exact_dc_gain(sampled)
-    return None if gain is None else gain * signals.input.full_scale / signals.output.full_scale
 
 
 def _searched(

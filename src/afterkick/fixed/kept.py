@@ -20,9 +20,20 @@ from afterkick.fixed.quantise import PROBE_BITS, ExactSection, Triple
 from afterkick.numbers import is_exactly_zero, round_to_integer, working_bits
 
 if TYPE_CHECKING:
+    from afterkick.design.schema import Signals
     from afterkick.sampling.sampled import Sampled
 
-__all__ = ["Lattice", "Share", "exact_dc_gain", "gain_at_one", "handed_over", "lattice", "numerator_symmetry", "shares"]
+__all__ = [
+    "Lattice",
+    "Share",
+    "exact_code_gain",
+    "exact_dc_gain",
+    "gain_at_one",
+    "handed_over",
+    "lattice",
+    "numerator_symmetry",
+    "shares",
+]
 
 FEW_PLACES = 16
 """A denominator's sum may be made a multiple of a number up to this one: that moves it by a few last places."""
@@ -41,6 +52,12 @@ def exact_dc_gain(sampled: "Sampled") -> fmpq | None:
     if gain is None or sampled.method in KEEPING_METHODS:
         return gain
     return gain if sampled.method == "matched" and sampled.options.match_hz is None else None
+
+
+def exact_code_gain(sampled: "Sampled", signals: "Signals") -> fmpq | None:
+    """The same from input codes to output codes."""
+    gain = exact_dc_gain(sampled)
+    return None if gain is None else gain * signals.input.full_scale / signals.output.full_scale
 
 
 @frozen

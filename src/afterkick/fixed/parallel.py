@@ -16,7 +16,7 @@ from typing import TYPE_CHECKING, cast
 from attrs import evolve
 from flint import arb, ctx, fmpq
 
-from afterkick.errors import Problem, Refused
+from afterkick.errors import Problem, Refused, each
 from afterkick.fixed.binary_points import (
     MINUS_ONE,
     ONE,
@@ -40,13 +40,14 @@ from afterkick.fixed.delta_core import Numbers, delta_core, slope
 from afterkick.fixed.parts import Parts
 from afterkick.fixed.program import Coefficient, Move, Preset, Program, ProgramSection, Role, Step, Word
 from afterkick.fixed.quantise import PROBE_BITS, ExactSection, exact_sections
-from afterkick.fixed.ranges import Interval, require_valid
+from afterkick.fixed.ranges import require_valid
 from afterkick.fixed.scaling import FloatSection
 from afterkick.fixed.wide import (
     MOST_STATE_BITS,
     Core,
     Frame,
     Weighed,
+    known_words,
     output_sum,
     weighed_sum,
 )
@@ -150,16 +151,7 @@ def _cores(sections: list[ExactSection], gains: list[tuple[Scaled, ...]], frame:
 
     :raises Refused: with the problems of all of them.
     """
-    problems: list[Problem] = []
-    cores = []
-    for section, gain in zip(sections, gains, strict=True):
-        try:
-            cores.append(delta_core(section, frame, gain))
-        except Refused as refusal:
-            problems += refusal.problems
-    if problems:
-        raise Refused(problems)
-    return cores
+    return each(lambda part: delta_core(part[0], frame, part[1]), zip(sections, gains, strict=True))
 
 
 def _finest_sum(builder: Builder, cores: list[Core], taps: tuple[Scaled, ...]) -> int:
@@ -271,18 +263,8 @@ def _part_sections(
     """What brings each part on, and at the end the input words."""
     for section, core in zip(sections, cores, strict=True):
         last = section is sections[-1]
-        yield ProgramSection(
-            words=core.words,
-            steps=(*core.steps, *(moves("x", depth) if last else ())),
-            source=frame.source,
-            dest=core.wide,
-            b=core.b,
-            b_fraction_bits=core.b_bits,
-            a=core.a,
-            a_fraction_bits=core.a_bits,
-            coefficients=core.coefficients,
-            marginal=section.marginal,
-        )
+        steps = (*core.steps, *(moves("x", depth) if last else ()))
+        yield core.section(core.words, steps, frame.source, core.wide, marginal=section.marginal)
 
 
 def _preset(
@@ -299,12 +281,10 @@ def _preset(
     steps += [step for core in cores for step in core.steady or ()]
     (free,) = whole
     others = [core for core in cores if core is not free]
-    ranges = {core.wide: Interval.of_word(core.bits) for core in others}
-    ranges |= {word: Interval.of_word(frame.builder.data_bits) for word in (WANTED, *(word for _, word, _ in weighed))}
-    fractions = {core.wide: core.fraction_bits for core in others} | {WANTED: 0} | {word: 0 for _, word, _ in weighed}
+    known = known_words(frame.builder, others, [WANTED, *(word for _, word, _ in weighed)])
     left: list[Weighed] = [(ONE, WANTED, ""), *((MINUS_ONE, core.wide, "") for core in others)]
     left += [(Scaled(-tap.integer, tap.fraction_bits), word, "") for tap, word, _ in weighed]
-    total = weighed_sum(frame.builder, free.wide, left, fractions, ranges, free.fraction_bits)
+    total = weighed_sum(frame.builder, free.wide, left, *known, free.fraction_bits)
     if total is None:
         return None
     assert frame.limits is not None

@@ -12,7 +12,7 @@ from typing import TYPE_CHECKING
 from attrs import frozen
 from flint import fmpq
 
-from afterkick.errors import Problem, Refused
+from afterkick.errors import Problem, Refused, each
 from afterkick.fixed.cascade import (
     SCALING_BITS,
     Builder,
@@ -25,7 +25,7 @@ from afterkick.fixed.cascade import (
     signal_chain,
     unsupported,
 )
-from afterkick.fixed.kept import exact_dc_gain
+from afterkick.fixed.kept import exact_code_gain
 from afterkick.fixed.program import Program, ProgramSection, Role, Sum, Term, Word
 from afterkick.fixed.pulse_grid import Integers
 from afterkick.fixed.quantise import (
@@ -70,18 +70,9 @@ def transposed_program(
         raise Refused(problems)
     sections, exponents = scaled(exact_sections(sampled), arithmetic.scaling, signals)
     builder, state_bits = Builder.of(arithmetic), arithmetic.state_bits
-    plans: list[_Plan] = []
-    for section in sections:
-        try:
-            plans.append(_plan(section, builder, state_bits))
-        except Refused as refusal:
-            problems += refusal.problems
-    if problems:
-        raise Refused(problems)
+    plans = each(lambda section: _plan(section, builder, state_bits), sections)
     if search:
-        gain = exact_dc_gain(sampled)
-        whole = None if gain is None else gain * signals.input.full_scale / signals.output.full_scale
-        sections, plans = _searched(sections, plans, builder, state_bits, whole)
+        sections, plans = _searched(sections, plans, builder, state_bits, exact_code_gain(sampled, signals))
     chain = signal_chain(builder.data_bits, exponents, sampled.delay_samples)
     wired = tuple(_wired(*each) for each in zip(sections, plans, chain, strict=True))
     return finished(wired, "transposed", sampled, arithmetic, signals, name, title=title, digest=digest)

@@ -34,6 +34,7 @@ __all__ = [
     "Weighed",
     "ball_floats",
     "endless_at",
+    "known_words",
     "output_sum",
     "weighed_sum",
     "wide_cascade",
@@ -234,6 +235,27 @@ class Sheet:
         self.sums.append(Sum(dest, listed, width, 0, builder.rounding, builder.overflow, limits=held))
         return True
 
+    def core(
+        self,
+        first: int,
+        wide: str,
+        transfer: tuple[Triple, int, Triple, int],
+        coefficients: tuple[Coefficient, ...],
+        steady: tuple[Sum, ...] | None = None,
+    ) -> "Core":
+        """The words and sums so far as a section whose transfer function is b, its fraction bits, a and its own."""
+        return Core(
+            tuple(self.words),
+            tuple(self.sums),
+            first,
+            wide,
+            bits_of(self.ranges[wide]),
+            self.fractions[wide],
+            *transfer,
+            coefficients,
+            steady,
+        )
+
     def steady(self, dest: str, weighed: Sequence[Weighed]) -> Sum | None:
         """The sum that gives a state the value it rests at; None where no accumulator holds it."""
         return weighed_sum(self.frame.builder, dest, weighed, self.fractions, self.ranges, self.fractions[dest])
@@ -260,6 +282,31 @@ class Core:
     steady: tuple[Sum, ...] | None = None
     """What gives the states the values they rest at with a constant source, but for an output that integrates; None
     where that is not known."""
+
+    def section(
+        self,
+        words: tuple[Word, ...],
+        steps: tuple[Step, ...],
+        source: str,
+        dest: str,
+        *,
+        gain_log2: int = 0,
+        marginal: bool,
+    ) -> ProgramSection:
+        """The section of a program whose words and steps are these."""
+        return ProgramSection(
+            words=words,
+            steps=steps,
+            source=source,
+            dest=dest,
+            b=self.b,
+            b_fraction_bits=self.b_bits,
+            a=self.a,
+            a_fraction_bits=self.a_bits,
+            coefficients=self.coefficients,
+            gain_log2=gain_log2,
+            marginal=marginal,
+        )
 
 
 def wide_cascade(
@@ -321,16 +368,11 @@ def wide_cascade(
             (word,), after = sheet.words, sheet.sums
         own = core.words if word is wide else (word, *core.words)
         wired.append(
-            ProgramSection(
-                words=(*(words if k == 0 else ()), *own),
-                steps=(*core.steps[: core.first], *after, *core.steps[core.first :], *(shift if k == 0 else ())),
-                source=source,
-                dest=word.name,
-                b=core.b,
-                b_fraction_bits=core.b_bits,
-                a=core.a,
-                a_fraction_bits=core.a_bits,
-                coefficients=core.coefficients,
+            core.section(
+                (*(words if k == 0 else ()), *own),
+                (*core.steps[: core.first], *after, *core.steps[core.first :], *(shift if k == 0 else ())),
+                source,
+                word.name,
                 gain_log2=(exponents[k - 1] if k else 0) - exponents[k],
                 marginal=section.marginal,
             )
@@ -341,14 +383,21 @@ def wide_cascade(
     return tuple(wired)
 
 
+def known_words(
+    builder: Builder, cores: Sequence[Core], data_words: Sequence[str]
+) -> tuple[dict[str, int], dict[str, Interval]]:
+    """The fraction bits, counted from the last place of the data, and the ranges of wide outputs and data words."""
+    fractions = {core.wide: core.fraction_bits for core in cores} | dict.fromkeys(data_words, 0)
+    ranges = {core.wide: Interval.of_word(core.bits) for core in cores}
+    return fractions, ranges | dict.fromkeys(data_words, Interval.of_word(builder.data_bits))
+
+
 def output_sum(
     builder: Builder, cores: Sequence[Core], taps: Sequence[Weighed] = (), limits: tuple[int, int] | None = None
 ) -> Sum:
     """The output word: wide outputs and what the taps take of data words, added up, rounded, and held within limits."""
-    ranges = {core.wide: Interval.of_word(core.bits) for core in cores}
-    ranges |= {word: Interval.of_word(builder.data_bits) for _, word, _ in taps}
-    fractions = {core.wide: core.fraction_bits for core in cores} | {word: 0 for _, word, _ in taps}
-    step = weighed_sum(builder, "y", [*((ONE, core.wide, "") for core in cores), *taps], fractions, ranges, 0)
+    weighed = [*((ONE, core.wide, "") for core in cores), *taps]
+    step = weighed_sum(builder, "y", weighed, *known_words(builder, cores, [word for _, word, _ in taps]), 0)
     if step is None:
         widen = "accumulator_bits = 64, " if builder.widest < WIDEST_ACCUMULATOR else ""
         raise Refused(

@@ -120,8 +120,13 @@ class WorstCase:
         return {source: self.system.responses(source.dest) for source in self.system.sources}
 
     @cached_property
+    def closed_to_input(self) -> dict[str, RationalResponse]:
+        """As ``to_input``, without any cut."""
+        return self.closed.responses(None) if self.held else self.to_input
+
+    @cached_property
     def closed_to_rounding(self) -> dict[RoundingSource, dict[str, RationalResponse]]:
-        """The same without any cut."""
+        """As ``to_rounding``, without any cut."""
         if not self.held:
             return self.to_rounding
         return {source: self.closed.responses(source.dest) for source in self.closed.sources}
@@ -152,7 +157,7 @@ class WorstCase:
     @cached_property
     def rounding_span(self) -> tuple[float, float]:
         """The least and the most that all roundings together add to the output."""
-        up, down = self.from_rounding(self.program.output, self.to_rounding)
+        up, down = self.from_rounding(self.program.output)
         return -down, up
 
     @cached_property
@@ -168,7 +173,7 @@ class WorstCase:
         reach = rounded_up(self.peak_code * self._sum(self.to_input[name]).upper)
         for source, responses in self.to_held.items():
             reach = rounded_up(reach + rounded_up(max(map(abs, self.held[source])) * self._sum(responses[name]).upper))
-        up, down = self.from_rounding(name, self.to_rounding)
+        up, down = self.from_rounding(name)
         lowest, highest = rounded_down(-reach - down), rounded_up(reach + up)
         if name not in self.may_overflow:
             # no state and no input code can take it beyond: what the sum of the worst cases says more is its slack
@@ -179,12 +184,10 @@ class WorstCase:
             lowest, highest = max(lowest, limits[0]), min(highest, limits[1])
         return WordRange(name, lowest, highest, reach, max(up, down), word.lowest, word.highest, clamped)
 
-    def from_rounding(
-        self, name: str, to_rounding: dict[RoundingSource, dict[str, RationalResponse]]
-    ) -> tuple[float, float]:
+    def from_rounding(self, name: str) -> tuple[float, float]:
         """How far up and down all roundings take a word at most."""
         up = down = 0.0
-        for source, responses in to_rounding.items():
+        for source, responses in self.to_rounding.items():
             response = responses[name]
             if response.numerator.is_zero():
                 continue

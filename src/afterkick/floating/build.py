@@ -10,7 +10,7 @@ from typing import TYPE_CHECKING
 from attrs import field, frozen
 from flint import arb, fmpq
 
-from afterkick.errors import Problem, Refused
+from afterkick.errors import Problem, Refused, each
 from afterkick.fixed.cascade import delay_problems, delayed, moves
 from afterkick.fixed.program import Role, SignalFormat
 from afterkick.fixed.quantise import PROBE_BITS, ExactSection, exact_sections
@@ -73,14 +73,7 @@ def float_program(
         rounding moved across the unit circle or merged with z = 1, a delay that is too long.
     """
     problems = delay_problems(sampled.delay_samples) + _signal_problems(signals) + _flush_problems(flush_below)
-    rounded: list[_Rounded] = []
-    for section in exact_sections(sampled):
-        try:
-            rounded.append(_rounded(section))
-        except Refused as refusal:
-            problems += refusal.problems
-    if problems:
-        raise Refused(problems)
+    rounded = each(_rounded, exact_sections(sampled), problems)
     threshold = None if flush_below is None else _threshold(flush_below)
     return FloatProgram(
         name=name,
