@@ -25,12 +25,10 @@ __all__ = [
     "certified",
     "decided_sign",
     "fraction",
-    "imaginary_part",
     "is_exactly_zero",
     "mid_float",
     "nearest_float",
     "rational",
-    "real_part",
     "round_to_integer",
     "to_text",
     "vanishes",
@@ -150,16 +148,6 @@ def round_to_integer(compute: Callable[[], arb], what: str) -> int:
         if bits >= HIGHEST_BITS:
             raise Uncertified(f"{what} could not be rounded with {HIGHEST_BITS} bits of working precision")
         bits *= 2
-
-
-def real_part(value: acb) -> arb:
-    """Re, as a ball."""
-    return value.real
-
-
-def imaginary_part(value: acb) -> arb:
-    """Im, as a ball."""
-    return value.imag
 
 
 def mid_float(value: arb) -> float:
