@@ -313,3 +313,23 @@ def test_closed_loop_against_python_control():
         level = (gain * int(run.outputs[0]) * count - pole * level) / one
     assert np.abs(np.array(outputs) - expected).max() < 3 * count
     assert abs(outputs[-1] - 1) <= count
+
+
+def test_a_coefficient_that_is_a_short_fraction_keeps_its_meaning():
+    """The ideal derivative has its pole at z = -1: 1 + a1 is 2, in whatever last places the transfer function needs."""
+    filtered = sampled(blocks(Pid(fmpq(1, 10), fmpq(2), fmpq(1, 500))), RATE, "bilinear")
+    program = build("parallel", filtered, signals=DRIVE, coefficient_bits=12)
+    assert any(section.a[:2] == (1, 1) for section in program.sections)
+
+
+def test_large_parts_find_room_in_the_accumulator():
+    """A gain of 4000 in 32 bits, and an integral whose exact state would need as many fraction bits as that leaves."""
+    filtered = sampled(blocks(Pid(fmpq(1000), fmpq(1, 3))), RATE, "backward-difference")
+    program = build("parallel", filtered, signals=DRIVE, coefficient_bits=32, data_bits=24)
+    assert all(one.bits <= one.accumulator_bits for one in bounds(program, filtered, None).sums)
+
+
+def test_states_that_take_in_nothing_are_refused():
+    slow = sampled(blocks(Pid(fmpq(1, 5), fmpq(1, 10**6))), RATE, "bilinear")
+    with pytest.raises(Refused, match=r"arithmetic\.state_bits, section 1: states of 17 bits, .* rounded to nothing"):
+        build("parallel", slow, signals=DRIVE, state_bits=17)
